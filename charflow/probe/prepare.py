@@ -1,0 +1,60 @@
+"""Everything known about a corner before its tables are measured: function proved, rest and settings chosen."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+from charflow.errors import TrialError
+from charflow.plan.arcs import Arc, Kind, arcs_of
+from charflow.plan.behaviour import behaviour_of
+from charflow.plan.circuit import Circuit
+from charflow.plan.stimulus import Condition, ramp_time, relaxed
+from charflow.plan.trial import Outcome, Trial
+from charflow.probe.function import check_function
+from charflow.probe.rest import Rest, proved_rest, shortest_working
+from charflow.sheet import Sheet
+
+MakeEvaluate = Callable[[Circuit], Callable[[Trial], Outcome]]
+
+
+@dataclass(frozen=True)
+class Prepared:
+    """A circuit with its rest time set, and how that was proved."""
+
+    circuit: Circuit
+    rest: Rest
+
+
+def prepare(make: MakeEvaluate, sheet: Sheet, circuit: Circuit) -> Prepared:
+    """Prove the function of ``sheet`` at the corner of ``circuit`` and choose the rest time.
+
+    ``make`` turns a circuit into a function from trial to outcome. Raises :class:`FunctionError` where
+    the cell does something else than the sheet says.
+    """
+    cell = behaviour_of(sheet)
+
+    def works(rest: float) -> int:
+        return check_function(make(circuit.rested(rest)), cell, sheet, circuit.corner, until=rest)
+
+    def delays(rest: float) -> tuple[float, ...]:
+        evaluate = make(circuit.rested(rest))
+        return tuple(_delay(evaluate, sheet, arc, circuit.corner, rest) for arc in arcs)
+
+    arcs = [arc for arc in arcs_of(sheet) if arc.kind is Kind.CLK_TO_Q]
+    first, count = shortest_working(works)
+    rest = proved_rest(delays, first, count)
+    return Prepared(circuit.rested(rest.seconds), rest)
+
+
+def _delay(evaluate: Callable[[Trial], Outcome], sheet: Sheet, arc: Arc, corner: str, until: float) -> float:
+    axes = sheet.axes
+    slew = axes.clock_slew[len(axes.clock_slew) // 2]
+    condition = Condition(corner, slew, None, axes.constraint_load)
+    end = until + ramp_time(slew, sheet.measure.slew_fractions)
+    outcome = evaluate(relaxed(sheet, arc, condition, end))
+    (pin, rising), *_ = arc.observed
+    swing = outcome.of(pin)
+    if not swing.settled(rising) or not swing.crossings:
+        raise TrialError(f"{pin} does not {'rise' if rising else 'fall'} within {end:g} s of the clock edge")
+    return swing.crossings[-1]
