@@ -76,7 +76,9 @@ def arcs_of(sheet: Sheet) -> tuple[Arc, ...]:
         )
     arcs = (*_delays(cell), *_constraints(cell))
     if not arcs:
-        raise SheetError("no clock edge can move any output, so there is nothing to measure", where=(str(sheet.path),))
+        raise SheetError(
+            "no clock edge can move any output, so there is nothing to measure", where=(str(sheet.path),)
+        )
     return arcs
 
 

@@ -146,7 +146,9 @@ def _behaviour_of(sheet: Sheet) -> Behaviour:
     control = controls[0]
     transparent = sheet.pins[control].role is Role.GATE
     next_state = _next_state(sheet)
-    outputs = tuple((pin, _logic(f"pins.{pin}.shows", sheet.pins[pin].shows or STATE)) for pin in sheet.outputs)
+    outputs = tuple(
+        (pin, _logic(f"pins.{pin}.shows", sheet.pins[pin].shows or STATE)) for pin in sheet.outputs
+    )
     states = {name for name, _ in next_state}
     for name, logic in next_state:
         _check_names(f"cell.next_state ({name})", logic, {*sheet.inputs, *states} - {control})
@@ -210,7 +212,7 @@ def _default_next_state(sheet: Sheet) -> str:
     scan_in, scan_on = one(Role.SCAN_DATA), one(Role.SCAN_ENABLE)
     if data is None:
         raise SheetError(
-            "pins: none has the role 'data'", todo='Give one that role, or write cell.next_state yourself.'
+            "pins: none has the role 'data'", todo="Give one that role, or write cell.next_state yourself."
         )
     text = data if enable is None else f"({enable} ? {data} : {STATE})"
     if (scan_in is None) != (scan_on is None):

@@ -14,8 +14,8 @@ from pathlib import Path
 
 from charflow.errors import CharflowError, NetlistError
 from charflow.sheet import Corner, Role, Sheet
-from charflow.sheet.netlist import Line, check_ports, find_subckt
 from charflow.sheet.lines import render
+from charflow.sheet.netlist import Line, check_ports, find_subckt, loose_elements
 from charflow.sheet.prune import prune
 from charflow.sheet.sources import Rules, fingerprint, gather
 
@@ -77,9 +77,14 @@ class Sources:
 
 def rules_of(sheet: Sheet) -> Rules:
     """Return what the sheet allows its files to include: their own folders and those it names."""
-    named = [sheet.cell.netlist, *(Path(_split(spec)[0]) for c in sheet.corners.values() for spec in c.models)]
+    named = [
+        sheet.cell.netlist,
+        *(Path(_split(spec)[0]) for c in sheet.corners.values() for spec in c.models),
+    ]
     folders = (*(path.parent for path in named), *sheet.cell.include_folders)
-    return Rules(folders=tuple(dict.fromkeys(folders)), allow=sheet.cell.allow)
+    modes = {corner.compatibility or "" for corner in sheet.corners.values()}
+    dollar = not any("ps" in mode for mode in modes)  # in PSPICE mode a dollar sign is no comment
+    return Rules(folders=tuple(dict.fromkeys(folders)), allow=sheet.cell.allow, dollar_comments=dollar)
 
 
 def _split(spec: str) -> tuple[str, str | None]:
@@ -122,8 +127,17 @@ def circuit_of(sheet: Sheet, sources: Sources, corner: str, *, pruned: bool = Tr
         check_ports(subckt, tuple(sheet.pins))
     except NetlistError as error:
         raise error.at(str(sheet.path)) from None
+    loose = loose_elements(sources.netlist)
+    if loose:
+        raise NetlistError(
+            f"{loose[0].text.split()[0]!r} stands outside every subckt",
+            where=(loose[0].place,),
+            todo="A cell's netlist holds subckts only; put the elements into one, or remove them.",
+        )
     by_name = {pin.lower(): pin for pin in sheet.pins}
-    models = prune(sources.models[corner], sources.netlist, subckt.name) if pruned else sources.models[corner]
+    models = sources.models[corner]
+    if pruned:
+        models = prune(models, sources.netlist, subckt.name, scale=condition.options.get("scale"))
     circuit = Circuit(
         corner=corner,
         supply=condition.supply,
@@ -149,4 +163,14 @@ def circuit_of(sheet: Sheet, sources: Sources, corner: str, *, pruned: bool = Tr
     return replace(circuit, digest=hashlib.sha256("\n".join(facts).encode()).hexdigest())
 
 
-_DECIDING = ("supply", "temperature", "compatibility", "options", "subckt", "ports", "inputs", "powers", "fractions")
+_DECIDING = (
+    "supply",
+    "temperature",
+    "compatibility",
+    "options",
+    "subckt",
+    "ports",
+    "inputs",
+    "powers",
+    "fractions",
+)

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from itertools import pairwise
 
 from charflow.plan.circuit import Circuit
 from charflow.plan.stimulus import Waveform, begins, waveform
@@ -75,7 +76,7 @@ def _preamble(circuit: Circuit, start: Start, pin: str) -> list[tuple[float, flo
     ramp = circuit.rest * PREAMBLE_RAMP
     levels = [float(dict(vector)[pin]) for vector in start.vectors]
     points = [(0.0, levels[0])]
-    for index, (before, after) in enumerate(zip(levels, levels[1:], strict=False), start=1):
+    for index, (before, after) in enumerate(pairwise(levels), start=1):
         if after != before:
             points += [(index * circuit.rest, before), (index * circuit.rest + ramp, after)]
     return points
@@ -136,7 +137,9 @@ def deck(
     if rest_volts is not None:
         lines += initial_conditions(rest_volts)
     lines += [f".option {name}={value}" for name, value in settings.options.items()]
-    lines.append(f".save {' '.join(f'v({circuit.nodes[pin]})' for pin in (*circuit.inputs, *circuit.outputs))}")
+    lines.append(
+        f".save {' '.join(f'v({circuit.nodes[pin]})' for pin in (*circuit.inputs, *circuit.outputs))}"
+    )
     lines.append(f".tran {number(at.step)} {number(at.stop)} 0 {number(at.step)}")
     if measures:
         lines += _measures(circuit, trial, at)

@@ -80,7 +80,9 @@ def waveform(trial: Trial, pin: str, fractions: tuple[float, float]) -> Waveform
     return tuple(points)
 
 
-def _meeting(a: tuple[float, float, float, float], b: tuple[float, float, float, float]) -> tuple[float, float]:
+def _meeting(
+    a: tuple[float, float, float, float], b: tuple[float, float, float, float]
+) -> tuple[float, float]:
     slope_a, slope_b = (a[3] - a[2]) / (a[1] - a[0]), (b[3] - b[2]) / (b[1] - b[0])
     time = (b[2] - a[2] + slope_a * a[0] - slope_b * b[0]) / (slope_a - slope_b)
     return time, a[2] + slope_a * (time - a[0])

@@ -78,7 +78,9 @@ def check_function(evaluate: Evaluate, cell: Behaviour, sheet: Sheet, corner: st
                 moved.add(swing.pin)
     still = [pin for pin in sheet.outputs if pin not in moved]
     if still:
-        raise FunctionError(f"the output {still[0]} never moves, by what the sheet says", where=(f"corner {corner!r}",))
+        raise FunctionError(
+            f"the output {still[0]} never moves, by what the sheet says", where=(f"corner {corner!r}",)
+        )
     return tried
 
 
@@ -94,7 +96,9 @@ def _compare(flip: Flip, swing: Swing, before: bool | None, after: bool | None, 
         return
     if abs(swing.last - after) > TOLERANCE:
         raise FunctionError(
-            f"expected {swing.pin}={int(after)} afterwards, saw {swing.last:.2f} of supply", where=where, todo=_TODO
+            f"expected {swing.pin}={int(after)} afterwards, saw {swing.last:.2f} of supply",
+            where=where,
+            todo=_TODO,
         )
     if before == after and swing.crossings:
         raise FunctionError(

@@ -12,7 +12,7 @@ from charflow.plan.circuit import Circuit
 from charflow.plan.stimulus import Condition, ramp_time, relaxed
 from charflow.plan.trial import Outcome, Trial
 from charflow.probe.function import check_function
-from charflow.probe.rest import Rest, proved_rest, shortest_working
+from charflow.probe.rest import Rest, proved_rest, shortest_working, stated_rest
 from charflow.sheet import Sheet
 
 MakeEvaluate = Callable[[Circuit], Callable[[Trial], Outcome]]
@@ -42,8 +42,12 @@ def prepare(make: MakeEvaluate, sheet: Sheet, circuit: Circuit) -> Prepared:
         return tuple(_delay(evaluate, sheet, arc, circuit.corner, rest) for arc in arcs)
 
     arcs = [arc for arc in arcs_of(sheet) if arc.kind is Kind.CLK_TO_Q]
-    first, count = shortest_working(works)
-    rest = proved_rest(delays, first, count)
+    stated = sheet.measure.rest
+    if stated is not None:
+        rest = stated_rest(delays, stated, works(stated))
+    else:
+        first, count = shortest_working(works)
+        rest = proved_rest(delays, first, count)
     return Prepared(circuit.rested(rest.seconds), rest)
 
 

@@ -63,3 +63,9 @@ def proved_rest(delays: Callable[[float], tuple[float, ...]], rest: float, flips
         f"the relaxed delay still moves by {moved:.2%} when the rest before it is doubled to {rest:g} s",
         todo="The cell leaks away what it stores; it is dynamic, or a model is wrong.",
     )
+
+
+def stated_rest(delays: Callable[[float], tuple[float, ...]], rest: float, flips: int) -> Rest:
+    """Return the rest [s] the sheet states, with how far half of it would move the delays."""
+    now, before = delays(rest), delays(rest / 2)
+    return Rest(rest, max(abs(a / b - 1) for a, b in zip(now, before, strict=True)), flips)

@@ -141,7 +141,8 @@ def needless(models: Iterable[Line], sizes: Sizes) -> set[Line]:
     families: dict[str, list[Line]] = defaultdict(list)
     for line in models:
         found = _BIN.match(line.text[:200])
-        if found:
+        # a device may name one bin itself
+        if found and f"{found.group(1)}.{found.group(2)}".lower() not in sizes.users:
             families[found.group(1).lower()].append(line)
     dropped: set[Line] = set()
     for name, bins in families.items():
@@ -172,7 +173,6 @@ def _limits(text: str) -> dict[str, float] | None:
 
 def _inside(pair: tuple[float, float], box: dict[str, float], margin: float) -> bool:
     length, width = pair
-    return (
-        box["lmin"] * (1 - margin) <= length <= box["lmax"] * (1 + margin)
-        and box["wmin"] * (1 - margin) <= width <= box["wmax"] * (1 + margin)
-    )
+    return box["lmin"] * (1 - margin) <= length <= box["lmax"] * (1 + margin) and box["wmin"] * (
+        1 - margin
+    ) <= width <= box["wmax"] * (1 + margin)

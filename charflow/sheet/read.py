@@ -75,7 +75,9 @@ def _read_text(path: Path) -> str:
         raise SheetError("the file is not UTF-8 text", where=(str(path),)) from None
     except FileNotFoundError:
         raise SheetError(
-            "there is no such sheet", where=(str(path),), todo="Check the name, or see the README for a first one."
+            "there is no such sheet",
+            where=(str(path),),
+            todo="Check the name, or see the README for a first one.",
         ) from None
     except (OSError, ValueError) as error:
         reason = getattr(error, "strerror", None) or str(error)
@@ -141,12 +143,16 @@ def _explain(error: ValidationError, path: Path, text: str) -> SheetError:
     if kind == "enum" and key == "role":
         return _unknown(path, text, (*loc, str(first["input"])), tuple(role.value for role in Role))
     if kind == "too_short":
-        return SheetError(f"{_dotted(loc)} is empty; it needs at least one entry", where=_place(path, text, loc))
+        return SheetError(
+            f"{_dotted(loc)} is empty; it needs at least one entry", where=_place(path, text, loc)
+        )
     message = str(first["msg"]).removeprefix("Value error, ")
     if kind != "value_error":
         message = f"{message[0].lower()}{message[1:]}, found {_shorten(first.get('input'))}"
     if kind == "literal_error" and model is not None:
-        allowed = get_args(get_args(model.model_fields[key].annotation)[0]) if key in model.model_fields else ()
+        allowed = (
+            get_args(get_args(model.model_fields[key].annotation)[0]) if key in model.model_fields else ()
+        )
         message = f"expected one of {', '.join(map(str, allowed))}, found {_shorten(first.get('input'))}"
     return SheetError(f"{_dotted(loc)}: {message}" if loc else message, where=_place(path, text, loc))
 
@@ -179,7 +185,9 @@ def _line_of(text: str, loc: tuple[str, ...]) -> int | None:
     found, start = None, 0
     lines = text.splitlines()
     for part in loc:
-        pattern = re.compile(rf"(^\s*\[+[^\]#]*\b{re.escape(part)}\b|^\s*\"?{re.escape(part)}\"?\s*=|[{{,]\s*{re.escape(part)}\s*=)")
+        pattern = re.compile(
+            rf"(^\s*\[+[^\]#]*\b{re.escape(part)}\b|^\s*\"?{re.escape(part)}\"?\s*=|[{{,]\s*{re.escape(part)}\s*=)"
+        )
         for number in range(start, len(lines)):
             if pattern.search(lines[number]):
                 found, start = number + 1, number

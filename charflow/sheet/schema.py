@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from enum import StrEnum
+from itertools import pairwise
 from pathlib import Path
 from typing import Annotated, Any, Literal, Self
 
@@ -97,7 +98,7 @@ class Pin(_Strict):
                 f"a pin of role {self.role.value!r} needs active = {wanted[0]!r} or {wanted[1]!r}, found {found}"
             )
         if self.role is Role.OUTPUT and self.shows is None:
-            raise ValueError("an output needs shows, such as shows = \"state\" or shows = \"!state\"")
+            raise ValueError('an output needs shows, such as shows = "state" or shows = "!state"')
         if self.role is not Role.OUTPUT and self.shows is not None:
             raise ValueError(f"only an output takes 'shows'; this pin's role is {self.role.value!r}")
         return self
@@ -114,7 +115,7 @@ class Corner(_Strict):
 
 
 def _ascending(values: tuple[float, ...], what: str) -> None:
-    for before, after in zip(values, values[1:], strict=False):
+    for before, after in pairwise(values):
         if after <= before:
             raise ValueError(
                 f"{what} must rise from entry to entry; {after:g} comes after {before:g}. "
@@ -139,18 +140,24 @@ class Axes(_Strict):
                 raise ValueError(f"{name} must be greater than zero, found {values[0]:g}")
             limit = 1e-6 if name != "load" else 1e-9
             if values[-1] > limit:
-                raise ValueError(f"{name} of {values[-1]:g} is beyond {limit:g}: check the prefix of the unit")
+                raise ValueError(
+                    f"{name} of {values[-1]:g} is beyond {limit:g}: check the prefix of the unit"
+                )
         if self.constraint_load <= 0:
             raise ValueError(f"constraint_load must be greater than zero, found {self.constraint_load:g}")
         return self
 
 
 class Measure(_Strict):
-    """How a number is defined: pushout as a fraction, slew fractions of supply, resolution in seconds."""
+    """How a number is defined: pushout as a fraction, slew fractions of supply, resolution in seconds.
+
+    ``rest`` [s] is how long the cell is left alone before a trial; without it charflow finds one.
+    """
 
     pushout: Fraction = Field(default=0.1, gt=0, le=10)
     slew_fractions: tuple[float, float] = (0.2, 0.8)
     resolution: Seconds = Field(default=0.1e-12, ge=1e-15, le=1e-9)
+    rest: Seconds | None = Field(default=None, ge=1e-11, le=1e-3)
 
     @model_validator(mode="after")
     def _sane_fractions(self) -> Self:

@@ -236,13 +236,7 @@ def _divide(lines: list[Line]) -> _Library:
                 raise NetlistError(
                     "an .endl without a .lib NAME before it", where=(line.place,), todo="Remove it."
                 )
-            closing = [name.lower() for name in _words(line)]
-            if closing and closing != [name.lower() for name in _words(opened)]:
-                raise NetlistError(
-                    f"found {line.text!r}, expected the end of {opened.text!r} ({opened.place})",
-                    where=(line.place,),
-                    todo="Close a section before the next one starts, with its own name.",
-                )
+            # its name may differ, as ngspice lets it: sections cannot nest
             into, opened = loose, None
         elif word == ".lib" and len(_words(line)) == 1:
             if opened is not None:

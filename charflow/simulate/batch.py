@@ -50,7 +50,9 @@ def run_deck(text: str, compatibility: str | None, limit: float = 600.0) -> tupl
         raw = folder / "trial.raw"
         if not raw.exists():
             lines = said.splitlines()
-            loaded = "No. of Data" in said or re.search("singular|timestep|operating point", said, re.IGNORECASE)
+            loaded = "No. of Data" in said or re.search(
+                "singular|timestep|operating point", said, re.IGNORECASE
+            )
             raise run_error(lines) if loaded else load_error(lines)
         return read_raw(raw), said
 
@@ -73,7 +75,9 @@ def read_raw(path: Path) -> dict[str, Samples]:
         raise LoadError("ngspice wrote a result without its size")
     shape = (int(points[1]), int(count[1]))
     table = np.frombuffer(body, dtype=np.float64, count=shape[0] * shape[1]).reshape(shape)
-    names = [line.split()[1] for line in text.partition("Variables:\n")[2].splitlines() if line.startswith("\t")]
+    names = [
+        line.split()[1] for line in text.partition("Variables:\n")[2].splitlines() if line.startswith("\t")
+    ]
     return {re.sub(r"^v\((.*)\)$", r"\1", name.lower()): table[:, i].copy() for i, name in enumerate(names)}
 
 

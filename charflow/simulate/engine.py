@@ -20,7 +20,7 @@ from charflow.plan.deck import (
     source_points,
     span,
 )
-from charflow.plan.trial import Outcome, Start, Trial
+from charflow.plan.trial import Outcome, Start, Swing, Trial
 from charflow.simulate.session import Session
 from charflow.simulate.waveform import Samples, swing_of
 
@@ -61,7 +61,7 @@ class Engine:
         waves, rung, zero = self.waves(trial)
         return Outcome(self.swings(waves, zero), rung)
 
-    def swings(self, waves: dict[str, Samples], zero: float) -> tuple:
+    def swings(self, waves: dict[str, Samples], zero: float) -> tuple[Swing, ...]:
         """Return the swing of every output in ``waves``; ``zero`` [s] is the trial's time zero there."""
         circuit = self.circuit
         return tuple(
@@ -69,7 +69,9 @@ class Engine:
             for pin in circuit.outputs
         )
 
-    def waves(self, trial: Trial, save: tuple[str, ...] | None = None) -> tuple[dict[str, Samples], str, float]:
+    def waves(
+        self, trial: Trial, save: tuple[str, ...] | None = None
+    ) -> tuple[dict[str, Samples], str, float]:
         """Return the waveforms [V] by node with ``time`` [s], the rung used, and the trial's time zero there."""
         errors: list[TrialError] = []
         for settings in ladder(self.settings):
@@ -103,12 +105,16 @@ class Engine:
             loads = dict.fromkeys(circuit.outputs, 1e-15)
             self.session.load(key, [*circuit_lines(circuit, drives, loads), ".end"], circuit.compatibility)
         self.session.use(key)
-        self.session.drive({f"v_{node[pin]}": pwl(points) for pin, points in drives.items()}, {}, settings.options)
+        self.session.drive(
+            {f"v_{node[pin]}": pwl(points) for pin, points in drives.items()}, {}, settings.options
+        )
         stop = settle_end(circuit, start)
         waves = self.session.transient(circuit.rest / 20, stop, ())
         return {name: float(wave[-1]) for name, wave in waves.items() if _is_node(name)}
 
-    def _attempt(self, trial: Trial, settings: Settings, save: tuple[str, ...]) -> tuple[dict[str, Samples], float]:
+    def _attempt(
+        self, trial: Trial, settings: Settings, save: tuple[str, ...]
+    ) -> tuple[dict[str, Samples], float]:
         circuit, node = self.circuit, self.circuit.nodes
         trial = nudged(trial, settings)
         at = span(circuit, trial, settings, warm=True)

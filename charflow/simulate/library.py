@@ -11,6 +11,7 @@ import ctypes.util
 import os
 import shutil
 import subprocess
+import sys
 import tempfile
 from functools import lru_cache
 from pathlib import Path
@@ -45,12 +46,32 @@ def find_executable() -> str:
     return found
 
 
+@lru_cache(maxsize=1)
+def library_version() -> int:
+    """Return the major version of libngspice, asked in a process of its own: this one stays clean."""
+    find_library()
+    code = "from charflow.simulate.session import Session; print('version', Session.here().version)"
+    done = subprocess.run(
+        [sys.executable, "-c", code], capture_output=True, text=True, timeout=120, check=False
+    )
+    words = done.stdout.split()
+    if done.returncode or words[-2:-1] != ["version"] or not words[-1].isdigit():
+        reason = (done.stderr.strip().splitlines() or ["it said nothing"])[-1]
+        raise SimulatorError(f"the ngspice library does not work: {reason}", todo=_INSTALL)
+    return int(words[-1])
+
+
 @lru_cache(maxsize=4)
 def executable_version(executable: str) -> int:
     """Return the major version of the ngspice executable."""
     try:
         done = subprocess.run(
-            [executable, "--version"], capture_output=True, text=True, timeout=30, check=False, env=environment()
+            [executable, "--version"],
+            capture_output=True,
+            text=True,
+            timeout=30,
+            check=False,
+            env=environment(),
         )
     except (OSError, subprocess.TimeoutExpired) as error:
         raise SimulatorError(f"{executable} does not run: {error}", todo=_INSTALL) from None
@@ -81,6 +102,8 @@ def private_folder() -> Path:
 
 def environment() -> dict[str, str]:
     """Return the environment the ngspice executable gets: little, and a home that is empty."""
-    keep = {name: os.environ[name] for name in ("PATH", "LD_LIBRARY_PATH", "SPICE_LIB_DIR") if name in os.environ}
+    keep = {
+        name: os.environ[name] for name in ("PATH", "LD_LIBRARY_PATH", "SPICE_LIB_DIR") if name in os.environ
+    }
     folder = str(private_folder())
     return {**keep, "HOME": folder, "LC_ALL": "C", "TMPDIR": folder, "OMP_NUM_THREADS": "1"}

@@ -18,7 +18,7 @@ from typing import Any
 import numpy as np
 
 from charflow.errors import LoadError, SimulatorError
-from charflow.plan.deck import Settings, number
+from charflow.plan.deck import number
 from charflow.simulate.library import find_library, private_folder
 from charflow.simulate.messages import load_error, run_error
 from charflow.simulate.waveform import Samples
@@ -45,6 +45,17 @@ class Clock:
     transient: float = 0.0
     loads: int = 0
     transients: int = 0
+
+    def __add__(self, other: Clock) -> Clock:
+        return Clock(
+            self.load + other.load,
+            self.transient + other.transient,
+            self.loads + other.loads,
+            self.transients + other.transients,
+        )
+
+    def __sub__(self, other: Clock) -> Clock:
+        return self + Clock(-other.load, -other.transient, -other.loads, -other.transients)
 
 
 class Session:
@@ -122,7 +133,9 @@ class Session:
             self._current = wanted
         return wanted
 
-    def drive(self, sources: Mapping[str, str], loads: Mapping[str, float], options: Mapping[str, str]) -> None:
+    def drive(
+        self, sources: Mapping[str, str], loads: Mapping[str, float], options: Mapping[str, str]
+    ) -> None:
         """Set the current circuit's sources (piecewise-linear number lists), loads [F] and options."""
         circuit = self._current
         if circuit is None:

@@ -75,4 +75,6 @@ def solve_constraint(
         confirm=lambda offset: measure(offset, longer=LATE),
     )
     crossing = search.run(guess)
-    return Constraint(crossing.value, crossing, deciding.get(crossing.passes) if crossing.value is not None else None)
+    return Constraint(
+        crossing.value, crossing, deciding.get(crossing.passes) if crossing.value is not None else None
+    )

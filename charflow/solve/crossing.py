@@ -25,6 +25,7 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, field
 from enum import StrEnum
+from itertools import pairwise
 
 MEASURABLE = 2e-4  # pushouts smaller than this, relative to the limit's own 1, are noise of the transient
 
@@ -122,7 +123,9 @@ class Search:
     @property
     def fails(self) -> Sample | None:
         """The failing sample nearest to the safe side."""
-        return max((s for s in self.samples if not s.passes(self.limit)), key=lambda s: s.offset, default=None)
+        return max(
+            (s for s in self.samples if not s.passes(self.limit)), key=lambda s: s.offset, default=None
+        )
 
     @property
     def passes(self) -> Sample | None:
@@ -221,7 +224,11 @@ class Search:
     def _predicted(self, slope: float) -> float | None:
         """Return the root of log pushout through the measurable samples nearest to it."""
         points = sorted(
-            ((abs(h), h, s.offset) for s in self.samples if (h := s.height(self.limit)) is not None and abs(h) < 6),
+            (
+                (abs(h), h, s.offset)
+                for s in self.samples
+                if (h := s.height(self.limit)) is not None and abs(h) < 6
+            ),
         )[:3]
         if not points:
             return None
@@ -277,5 +284,5 @@ def _inverse_quadratic(*points: tuple[float, float]) -> float | None:
         + x2 * h0 * h1 / ((h2 - h0) * (h2 - h1))
     )
     ordered = sorted(points)
-    falling = all(a[1] > b[1] for a, b in zip(ordered, ordered[1:], strict=False))
+    falling = all(a[1] > b[1] for a, b in pairwise(ordered))
     return root if falling and math.isfinite(root) else None

@@ -48,7 +48,9 @@ def _read(arc: Arc, outcome: Outcome) -> tuple[dict[str, float], dict[str, float
         begins_at_rest(swing, rising)
         delay = delay_of(swing, rising)
         if delay is None:
-            raise TrialError(f"{pin} does not {'rise' if rising else 'fall'} after the clock edge, data relaxed")
+            raise TrialError(
+                f"{pin} does not {'rise' if rising else 'fall'} after the clock edge, data relaxed"
+            )
         transition = swing.transitions[-1]
         if transition is None:
             raise NotSettled

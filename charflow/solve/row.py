@@ -16,7 +16,8 @@ from charflow.sheet import Sheet
 from charflow.solve.answer import Answer, answer
 from charflow.solve.constraint import Constraint, solve_constraint
 from charflow.solve.crossing import Ending, Guess
-from charflow.solve.reference import Reference, reference
+from charflow.solve.reference import reference
+from charflow.solve.verdict import Reference
 
 Evaluate = Callable[[Trial], Outcome]
 
@@ -74,6 +75,7 @@ class Meter:
     rungs: set[str] = field(default_factory=set)
 
     def __call__(self, trial: Trial) -> Outcome:
+        """Return the outcome of ``trial`` and note the rung that gave it."""
         outcome = self.evaluate(trial)
         self.rungs.add(outcome.rung)
         return outcome
@@ -97,6 +99,15 @@ def solve_row(
     solver = _Row(evaluate, ran, key_of, sheet, group, corner, clock_slew, tuple(neighbours))
     answers = [*solver.delays(), *solver.constraints()]
     return RowResult(clock_slew, tuple(answers), solver.hints)
+
+
+def lost_row(sheet: Sheet, group: Group, corner: str, clock_slew: float, reason: str) -> RowResult:
+    """Return the row in which no point has an answer, each for the same ``reason``."""
+
+    def evaluate(trial: Trial) -> Outcome:
+        raise TrialError(reason)
+
+    return solve_row(evaluate, lambda: 0, lambda trial: "", sheet, group, corner, clock_slew)
 
 
 @dataclass
@@ -129,7 +140,16 @@ class _Row:
         except TrialError as error:
             cost = self.ran() - before
             return [
-                answer(arc, condition, kind, None, None, one_line(error), cost if kind is Kind.CLK_TO_Q else 0, "")
+                answer(
+                    arc,
+                    condition,
+                    kind,
+                    None,
+                    None,
+                    one_line(error),
+                    cost if kind is Kind.CLK_TO_Q else 0,
+                    "",
+                )
                 for kind in (Kind.CLK_TO_Q, Kind.TRANSITION)
             ]
         key = self.key_of(relaxed(self.sheet, arc, condition, found.until))
@@ -146,7 +166,9 @@ class _Row:
         found: dict[tuple[int, int], Answer] = {}
         for number, arc in enumerate(self.group.constraints):
             for index in order:
-                condition = Condition(self.corner, self.clock_slew, slews[index], self.sheet.axes.constraint_load)
+                condition = Condition(
+                    self.corner, self.clock_slew, slews[index], self.sheet.axes.constraint_load
+                )
                 found[number, index] = self._constraint(number, arc, condition)
         return [found[key] for key in sorted(found)]
 
@@ -178,7 +200,9 @@ class _Row:
         ]
         near = sorted(here, key=lambda slew: abs(slew - data_slew))
         if there and data_slew in there[0]:
-            return self._from_rows(data_slew, [row.get(data_slew) for row in there], here, there[0], near, delay)
+            return self._from_rows(
+                data_slew, [row.get(data_slew) for row in there], here, there[0], near, delay
+            )
         if not near:
             return None
         first = here[near[0]]

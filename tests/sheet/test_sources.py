@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import shutil
 import subprocess
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 
 import pytest
@@ -83,8 +83,8 @@ class TestFollowing:
         ("files", "message"),
         [
             ({"top.spice": ".include top.spice\n"}, "includes itself: top.spice -> top.spice"),
-            ({"top.spice": ".inc b\n", "b": ".inc top.spice\n"}, "includes itself: top.spice -> b -> top.spice"),
-            ({"top.spice": ".lib b x\n", "b": ".lib x\n.lib b x\n.endl\n"}, "includes itself: top.spice -> b:x"),
+            ({"top.spice": ".inc b\n", "b": ".inc top.spice\n"}, "itself: top.spice -> b -> top.spice"),
+            ({"top.spice": ".lib b x\n", "b": ".lib x\n.lib b x\n.endl\n"}, "itself: top.spice -> b:x"),
             ({"top.spice": ".include gone.spice\n"}, "no such file"),
             ({"top.spice": ".include\n"}, "Write .include FILE"),
             ({"top.spice": ".include a b\n"}, "Write .include FILE"),
@@ -92,7 +92,7 @@ class TestFollowing:
             ({"top.spice": ".lib a\n.lib b\n.endl\n"}, "a section starts inside"),
             ({"top.spice": ".lib a\n"}, "has no .endl"),
             ({"top.spice": ".endl a\n"}, "an .endl without"),
-            ({"top.spice": ".lib a\n.endl b\n"}, "expected the end of '.lib a'"),
+            ({"top.spice": ".lib m x\n", "m": ".lib x\n.lib y\n.endl\n"}, "a section starts inside"),
             ({"top.spice": ".lib m x\n", "m": ".lib x\n.endl\n.lib X\n.endl\n"}, "defined twice"),
             ({"top.spice": ".lib m x\n", "m": "R1 a 0 1\n"}, "name none"),
             ({"top.spice": ".include ''\n"}, "Write .include FILE"),
@@ -106,7 +106,7 @@ class TestFollowing:
         with pytest.raises(NetlistError) as caught:
             gathered(tmp_path)
         assert message in str(caught.value)
-        assert str(tmp_path) in str(caught.value) or "includes itself" in message
+        assert str(tmp_path) in str(caught.value) or "itself" in message
 
     def test_stops_at_a_depth_no_real_library_has(self, tmp_path: Path) -> None:
         write(tmp_path, {f"f{n}": f".include f{n + 1}\n" for n in range(60)} | {"f60": ""})
@@ -166,7 +166,9 @@ class TestFolders:
         with pytest.raises(NetlistError):
             gathered(tmp_path)
 
-    @pytest.mark.parametrize("name", ["~/m.spice", "$HOME/m.spice", "${HOME}/m", "http://host/m", "file:///m"])
+    @pytest.mark.parametrize(
+        "name", ["~/m.spice", "$HOME/m.spice", "${HOME}/m", "http://host/m", "file:///m"]
+    )
     def test_expands_nothing_in_a_path(self, tmp_path: Path, name: str) -> None:
         write(tmp_path, {"top.spice": f".include '{name}'\n"})
         with pytest.raises(RefusedError, match=r"top\.spice:1: .*only plain paths"):
@@ -184,7 +186,7 @@ class TestFolders:
 
 @dataclass(frozen=True)
 class Attack:
-    """Hostile files. ``word`` must be in the refusal; '' means the text becomes harmless instead.
+    """Hostile files; ``word`` and ``place`` must be in the refusal.
 
     ``runs`` says that plain ngspice, given the same file, makes the witness.
     """
@@ -194,7 +196,6 @@ class Attack:
     word: str
     place: str = "top.spice:1"
     runs: bool = False
-    harmless: bool = field(default=False)
 
 
 def one(name: str, text: str, word: str, *, line: int = 1, runs: bool = False) -> Attack:
@@ -290,7 +291,8 @@ def runs_in_plain_ngspice(folder: Path, text: str) -> bool:
 
 
 DECK = "title\nV1 a 0 1\nR0 a 0 1k\n{}\n.op\n.end\n"
-needs_ngspice = pytest.mark.skipif(shutil.which("ngspice") is None, reason="the ngspice executable is not here")
+needs_ngspice = pytest.mark.skipif(shutil.which("ngspice") is None, reason="there is no ngspice executable")
+RUNNING = [attack for attack in (*ATTACKS, *HARMLESS) if attack.runs]
 
 
 @pytest.mark.parametrize("attack", ATTACKS, ids=lambda attack: attack.name)
@@ -314,7 +316,7 @@ def test_there_are_enough_attacks_that_plain_ngspice_runs() -> None:
 
 @needs_ngspice
 @pytest.mark.ngspice
-@pytest.mark.parametrize("attack", [a for a in (*ATTACKS, *HARMLESS) if a.runs], ids=lambda attack: attack.name)
+@pytest.mark.parametrize("attack", RUNNING, ids=lambda attack: attack.name)
 def test_the_same_files_do_run_in_plain_ngspice(tmp_path: Path, attack: Attack) -> None:
     write(tmp_path, attack.files)
     deck = attack.files["top.spice"] if attack.word == "ng_script" else DECK.format(".include top.spice")
@@ -332,9 +334,12 @@ def test_commands_in_comments_do_not_reach_ngspice(tmp_path: Path, attack: Attac
 
 
 PIECES = st.sampled_from(
-    [".control", ".Control", "\n", "\n", "\r\n", "+", "\\\\\n", TOUCH, ".endc", "*#", "*", "; ", " $ ", "//"]
-    + [" ", "\t", ".include b", ".lib b x", ".title", ".end", "R1 a 0 1", ".model m nmos", ".param x=1", "`"]
-    + [".subckt s a", ".ends", '"', "'", "=", ".if (1)", ".endif", "@", "#", "\f", ".options temp=1", "pre_"]
+    (
+        *(".control", ".Control", "\n", "\n", "\r\n", "+", "\\\\\n", TOUCH, ".endc", "*#", "*", "; ", " $ "),
+        *(" ", "\t", ".include b", ".lib b x", ".title", ".end", "R1 a 0 1", ".model m nmos", ".param x=1"),
+        *(".subckt s a", ".ends", '"', "'", "=", ".if (1)", ".endif", "@", "#", "\f", ".options temp=1"),
+        *("`", "//", "pre_", "shell "),
+    )
 )
 
 
@@ -388,7 +393,7 @@ class TestPermissions:
         with pytest.raises(SheetError, match="cannot be given"):
             gathered(tmp_path, allow=(permission,))
 
-    @pytest.mark.parametrize("permission", ["", "element", "elements:A", "element:AB", "all", "outside-folder:x"])
+    @pytest.mark.parametrize("permission", ["", "element", "elements:A", "element:AB", "outside-folder:x"])
     def test_an_unknown_one_is_an_error(self, tmp_path: Path, permission: str) -> None:
         write(tmp_path, {"top.spice": "R1 a 0 1\n"})
         with pytest.raises(SheetError, match="is no permission"):

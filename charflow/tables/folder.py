@@ -1,0 +1,132 @@
+"""The tables of a run folder: written, and read back."""
+
+from __future__ import annotations
+
+import json
+import os
+from collections.abc import Sequence
+from dataclasses import asdict, dataclass, fields
+from pathlib import Path
+from typing import Any
+
+from charflow import __version__
+from charflow.campaign.run import RunResult
+from charflow.errors import FolderError
+from charflow.sheet import Sheet
+from charflow.sheet.units import Unit, show
+from charflow.tables.flat import Row, row_of, to_csv
+from charflow.tables.text import CAUTION, to_markdown
+
+FORMAT = 1
+
+
+@dataclass(frozen=True)
+class Tables:
+    """What a run folder holds: the cell's name, lines about its conditions, facts for machines, and rows."""
+
+    cell: str
+    conditions: tuple[str, ...]
+    facts: dict[str, Any]
+    rows: tuple[Row, ...]
+
+
+def tables_of(sheet: Sheet, result: RunResult) -> Tables:
+    """Return the tables of ``result``."""
+    rows = tuple(row_of(answer) for answer in result.answers)
+    corners = {
+        name: {
+            "models": [Path(spec).name for spec in corner.models],
+            "supply_v": corner.supply,
+            "temperature_c": corner.temperature,
+            "rest_s": result.rests[name].seconds if name in result.rests else None,
+        }
+        for name, corner in sheet.corners.items()
+        if any(row.corner == name for row in rows)
+    }
+    low, high = sheet.measure.slew_fractions
+    facts = {
+        "charflow": __version__,
+        "ngspice": result.version,
+        "corners": corners,
+        "pushout": sheet.measure.pushout,
+        "slew_fractions": [low, high],
+        "constraint_load_ff": sheet.axes.constraint_load * 1e15,
+    }
+    name = sheet.cell.subckt or sheet.cell.netlist.stem
+    return Tables(name, tuple(_conditions(sheet, corners)), facts, rows)
+
+
+def _conditions(sheet: Sheet, corners: dict[str, Any]) -> list[str]:
+    low, high = sheet.measure.slew_fractions
+    lines = [
+        f"corner {name}: {', '.join(facts['models'])}, {facts['supply_v']:g} V, {facts['temperature_c']:g} C"
+        for name, facts in corners.items()
+    ]
+    lines.append(
+        f"delays and offsets from 50 % to 50 % of supply; slews and transitions between {low:.0%} and {high:.0%}"
+    )
+    load = show(sheet.axes.constraint_load, Unit.FARAD)
+    lines.append(
+        f"setup and hold: the offset at which clock-to-output delay has grown by {sheet.measure.pushout:g} "
+        f"of its relaxed value, or capture fails before that; outputs loaded with {load}"
+    )
+    return lines
+
+
+def write_tables(folder: Path, tables: Tables) -> None:
+    """Write ``tables.csv``, ``tables.json`` and ``tables.md`` into ``folder``, each whole or not at all."""
+    _replace(folder / "tables.csv", to_csv(tables.rows))
+    _replace(folder / "tables.json", to_json(tables))
+    _replace(folder / "tables.md", to_markdown(tables.cell, tables.conditions, tables.rows))
+
+
+def to_json(tables: Tables) -> str:
+    """Return the tables as JSON text."""
+    content = {
+        "format": FORMAT,
+        "cell": tables.cell,
+        "caution": CAUTION,
+        "conditions": list(tables.conditions),
+        "facts": tables.facts,
+        "rows": [asdict(row) for row in tables.rows],
+    }
+    return json.dumps(content, indent=1) + "\n"
+
+
+def read_tables(folder: Path) -> Tables:
+    """Return the tables of a run folder. Raises :class:`FolderError` where there are none."""
+    path = folder / "tables.json"
+    try:
+        raw = json.loads(path.read_text(encoding="utf-8"))
+        if raw["format"] != FORMAT:
+            raise FolderError(
+                f"tables of format {raw['format']!r}, this charflow reads {FORMAT}", where=(str(path),)
+            )
+        names = {field.name for field in fields(Row)}
+        rows = tuple(Row(**{name: row[name] for name in names}) for row in raw["rows"])
+        return Tables(raw["cell"], tuple(raw["conditions"]), raw["facts"], rows)
+    except FileNotFoundError:
+        raise FolderError(
+            "the folder holds no tables",
+            where=(str(folder),),
+            todo="Make them with charflow run SHEET --out DIR.",
+        ) from None
+    except (ValueError, KeyError, TypeError) as error:
+        raise FolderError(f"the tables cannot be read: {error!r}", where=(str(path),)) from None
+    except OSError as error:
+        raise FolderError(f"the tables cannot be read: {error.strerror}", where=(str(path),)) from None
+
+
+def _replace(path: Path, text: str) -> None:
+    part = path.with_name(f".{path.name}.part")
+    try:
+        part.write_text(text, encoding="utf-8")
+        os.replace(part, path)  # noqa: PTH105  # atomic on one file system
+    except OSError as error:
+        part.unlink(missing_ok=True)
+        raise FolderError(f"the file cannot be written: {error.strerror}", where=(str(path),)) from None
+
+
+def failures(rows: Sequence[Row]) -> int:
+    """Return how many rows have no value."""
+    return sum(row.value_ps is None for row in rows)

@@ -1,0 +1,86 @@
+"""Grids for people: Markdown for files, rich tables for the terminal."""
+
+from __future__ import annotations
+
+import html
+from collections.abc import Sequence
+from typing import TYPE_CHECKING
+
+from charflow.tables.flat import Row
+from charflow.tables.grid import Grid, grids_of
+
+if TYPE_CHECKING:
+    from rich.console import Console
+
+CAUTION = (
+    "These tables are only as good as the transistor models and the netlist they were measured on. "
+    "Sign-off belongs to the foundry's qualified flow and the responsible engineer."
+)
+
+
+def value_text(row: Row | None) -> str:
+    """Return a cell's value in ps to two decimals, or a dash."""
+    return "-" if row is None or row.value_ps is None else f"{row.value_ps:.2f}"
+
+
+def _heading(grid: Grid, column: float) -> str:
+    return f"{column:g} fF" if grid.column == "load" else f"{column:g} ps"
+
+
+def _across(grid: Grid) -> str:
+    return "output load" if grid.column == "load" else "data slew"
+
+
+def to_markdown(cell: str, conditions: Sequence[str], rows: Sequence[Row]) -> str:
+    """Return a document with a table a grid; ``conditions`` are lines about corners and definitions."""
+    lines = [f"# {_plain(cell)}", "", *[f"- {_plain(text)}" for text in conditions], "", CAUTION, ""]
+    corner = None
+    for grid in grids_of(rows):
+        if grid.corner != corner:
+            corner = grid.corner
+            lines += [f"## Corner {_plain(corner)}", ""]
+        lines += [f"### {_plain(grid.title[0].upper() + grid.title[1:])} [ps]", ""]
+        lines.append(
+            f"| clock slew \\ {_across(grid)} | {' | '.join(_heading(grid, c) for c in grid.columns)} |"
+        )
+        lines.append("|---:" * (len(grid.columns) + 1) + "|")
+        for slew in grid.clock_slews:
+            cells = " | ".join(value_text(grid.at(slew, column)) for column in grid.columns)
+            lines.append(f"| {slew:g} ps | {cells} |")
+        lines.append("")
+        holes = [row for row in grid.cells.values() if row.value_ps is None]
+        for row in holes:
+            lines.append(f"- no value at clock slew {row.clock_slew_ps:g} ps: {_plain(row.status)}")
+        if holes:
+            lines.append("")
+    return "\n".join(lines)
+
+
+def _plain(text: str) -> str:
+    return html.escape(text, quote=False).replace("|", "\\|").replace("`", "'")
+
+
+def print_tables(console: Console, rows: Sequence[Row]) -> None:
+    """Print every grid to the terminal, one table a pair of arcs."""
+    from rich import box
+    from rich.table import Table
+    from rich.text import Text
+
+    for grid in grids_of(rows):
+        table = Table(
+            title=Text(f"{grid.corner}: {grid.title} [ps]"),
+            title_justify="left",
+            box=box.SIMPLE_HEAD,
+            title_style="",
+        )
+        table.add_column(f"clock slew \\ {_across(grid)}", justify="right")
+        for column in grid.columns:
+            table.add_column(_heading(grid, column), justify="right")
+        for slew in grid.clock_slews:
+            table.add_row(f"{slew:g} ps", *(value_text(grid.at(slew, column)) for column in grid.columns))
+        console.print(table)
+    for row in rows:
+        if row.value_ps is None:
+            console.print(
+                Text(f"no value: {row.quantity} {row.pin or row.output} at {row.corner}: {row.status}")
+            )
