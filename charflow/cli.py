@@ -29,6 +29,10 @@ class _Commands(click.Group):
             sys.exit(error.exit_status)
         except BrokenPipeError:
             sys.exit(1)
+        except OSError as error:  # all others are explained where they happen
+            click.echo(f"charflow: cannot go on: {error}", err=True)
+            sys.stdout = None  # or Python complains about it once more at the end
+            sys.exit(1)
 
 
 @click.group(
@@ -38,7 +42,8 @@ class _Commands(click.Group):
 def main() -> None:
     """Measure the timing of register cells in ngspice and write tables for timing analysis.
 
-    Exit status: 0 done; 1 done, but points failed; 2 the input is wrong; 3 the simulator is missing or broken.
+    Exit status: 0 done; 1 done, but points failed; 2 the input is wrong; 3 the simulator is missing
+    or broken.
     """
 
 
@@ -85,21 +90,21 @@ def _run(path: Path, out: Path, workers: int | None, corners: tuple[str, ...]) -
     from charflow.campaign.run import run_campaign
     from charflow.progress import live
     from charflow.sheet import read_sheet
-    from charflow.tables.folder import tables_of, write_tables
+    from charflow.tables.folder import keep_sheet, tables_of, write_tables
 
     sheet = read_sheet(path)
+    text = _text_of(sheet)
     with live() as (tell, say):
         result = run_campaign(sheet, out, _workers(workers), corners or None, tell, say)
     tables = tables_of(sheet, result)
     if result.answers:
         write_tables(out, tables)
-        _copy_sheet(sheet, out)
+        keep_sheet(out, text)
     _report(sheet, result, tables, out)
 
 
-def _copy_sheet(sheet: Sheet, out: Path) -> None:
-    text = sheet.path.read_text(encoding="utf-8")
-    (out / "sheet.toml").write_text(text, encoding="utf-8")
+def _text_of(sheet: Sheet) -> str:
+    return sheet.path.read_bytes().decode("utf-8")
 
 
 def _report(sheet: Sheet, result: RunResult, tables: Tables, out: Path) -> None:

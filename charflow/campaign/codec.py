@@ -2,13 +2,21 @@
 
 from __future__ import annotations
 
+import hashlib
 from dataclasses import asdict, astuple
 from typing import Any
 
 from charflow.plan.arcs import Kind
+from charflow.plan.deck import Settings
 from charflow.plan.trial import Move, Outcome, Start, Swing, Trial
+from charflow.solve.accuracy import Accuracy
 from charflow.solve.answer import Answer
-from charflow.solve.row import Hint, RowResult
+from charflow.solve.row import Hint, Question, RowResult
+
+
+def seal(*fields: object) -> str:
+    """Return a short digest that goes with ``fields`` where they are kept, so that damage shows."""
+    return hashlib.blake2b(repr(fields).encode("utf-8", "backslashreplace"), digest_size=8).hexdigest()
 
 
 def trial_to(trial: Trial) -> dict[str, Any]:
@@ -61,11 +69,33 @@ def row_to(row: RowResult) -> dict[str, Any]:
     return {
         "clock_slew": row.clock_slew,
         "answers": [asdict(item) for item in row.answers],
-        "hints": [[number, slew, *astuple(hint)] for (number, slew), hint in row.hints.items()],
+        "hints": [[*key, asdict(hint)] for key, hint in row.hints.items()],
     }
 
 
 def row_from(raw: dict[str, Any]) -> RowResult:
     """Return the row that :func:`row_to` wrote."""
-    hints = {(number, slew): Hint(*rest) for number, slew, *rest in raw["hints"]}
+    hints = {(_question(asked), slew): _hint(hint) for asked, slew, hint in raw["hints"]}
     return RowResult(raw["clock_slew"], tuple(answer_from(a) for a in raw["answers"]), hints)
+
+
+def _question(raw: list[Any]) -> Question:
+    kind, pin, rising, when = raw
+    return kind, pin, rising, tuple((name, level) for name, level in when)
+
+
+def _hint(raw: dict[str, Any]) -> Hint:
+    return Hint(**{**raw, "shape": tuple((height, offset) for height, offset in raw["shape"])})
+
+
+def accuracy_to(accuracy: Accuracy) -> dict[str, Any]:
+    """Return chosen settings as JSON values."""
+    return {**asdict(accuracy), "settings": asdict(accuracy.settings), "taught": row_to(accuracy.taught)}
+
+
+def accuracy_from(raw: dict[str, Any]) -> Accuracy:
+    """Return the settings that :func:`accuracy_to` wrote."""
+    settings = raw["settings"]
+    extra = tuple((name, value) for name, value in settings["extra"])
+    chosen = Settings(**{**settings, "extra": extra})
+    return Accuracy(**{**raw, "settings": chosen, "taught": row_from(raw["taught"])})

@@ -1,29 +1,41 @@
 """The run folder's SQLite file: every trial and every solved row, keyed by what decides its outcome.
 
 Keys are digests of content, so a changed model, netlist, setting or simulator simply has other keys. One
-process writes (write-ahead log); a damaged file is kept aside and said so, never silently used.
+process writes (write-ahead log). Every entry carries a seal over its content: a damaged file is kept aside
+and said so, its sound entries are taken over, and nothing damaged is ever used.
 """
 
 from __future__ import annotations
 
 import json
 import sqlite3
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Iterator, Sequence
+from contextlib import closing
 from pathlib import Path
 from typing import Any
 
+from charflow.campaign.codec import seal
 from charflow.errors import FolderError
 
 FILE = "charflow.sqlite"
 SCHEMA = 1
+_COLUMNS = {
+    "trials": ("key", "label", "trial", "outcome"),
+    "rows": ("key", "row"),
+    "corners": ("key", "prepared"),
+    "meta": ("name", "value"),
+}
 _TABLES = """
-CREATE TABLE IF NOT EXISTS trials (
-    key TEXT PRIMARY KEY, label TEXT NOT NULL, trial TEXT NOT NULL, outcome TEXT NOT NULL) WITHOUT ROWID;
+CREATE TABLE IF NOT EXISTS trials (key TEXT PRIMARY KEY, label TEXT NOT NULL, trial TEXT NOT NULL,
+    outcome TEXT NOT NULL, seal TEXT NOT NULL) WITHOUT ROWID;
 CREATE INDEX IF NOT EXISTS trials_by_label ON trials (label);
-CREATE TABLE IF NOT EXISTS rows (key TEXT PRIMARY KEY, row TEXT NOT NULL) WITHOUT ROWID;
-CREATE TABLE IF NOT EXISTS corners (key TEXT PRIMARY KEY, prepared TEXT NOT NULL) WITHOUT ROWID;
-CREATE TABLE IF NOT EXISTS meta (name TEXT PRIMARY KEY, value TEXT NOT NULL) WITHOUT ROWID;
+CREATE TABLE IF NOT EXISTS rows (key TEXT PRIMARY KEY, row TEXT NOT NULL, seal TEXT NOT NULL) WITHOUT ROWID;
+CREATE TABLE IF NOT EXISTS corners (
+    key TEXT PRIMARY KEY, prepared TEXT NOT NULL, seal TEXT NOT NULL) WITHOUT ROWID;
+CREATE TABLE IF NOT EXISTS meta (
+    name TEXT PRIMARY KEY, value TEXT NOT NULL, seal TEXT NOT NULL) WITHOUT ROWID;
 """
+_TODO_WRITE = "Free some space, or check the permissions; then run the same command again to go on."
 
 
 class Store:
@@ -43,15 +55,25 @@ class Store:
         except sqlite3.DatabaseError as error:
             if readonly or isinstance(error, sqlite3.OperationalError):
                 raise FolderError(f"the store cannot be opened: {error}", where=(str(self.path),)) from None
-            say(
-                f"{self.path} is damaged ({error}); it is kept as {self._set_aside().name} and a new one begun"
-            )
+            self._begin_again(str(error), say)
+
+    def _begin_again(self, reason: str, say: Callable[[str], None]) -> None:
+        try:
+            aside = self._set_aside()
             self._db = self._open()
+            kept = self._take_over(aside)
+        except (OSError, sqlite3.Error) as error:
+            raise FolderError(
+                f"the store is damaged ({reason}) and cannot be set aside: {error}", where=(str(self.path),)
+            ) from None
+        say(f"{self.path} is damaged ({reason}); it is kept as {aside.name}, {kept} sound entries taken over")
 
     def _open(self) -> sqlite3.Connection:
         if self.readonly:
             db = sqlite3.connect(f"{self.path.absolute().as_uri()}?mode=ro", uri=True)
         else:
+            if self.path.is_file() and not self.path.stat().st_size:
+                raise sqlite3.DatabaseError("it is empty")
             db = sqlite3.connect(self.path)
         try:
             version = db.execute("PRAGMA user_version").fetchone()[0]
@@ -68,6 +90,10 @@ class Store:
                 db.execute("PRAGMA synchronous=NORMAL")
                 db.executescript(_TABLES)
                 db.execute(f"PRAGMA user_version={SCHEMA}")
+            for table in _COLUMNS:
+                for _, sound in _entries(db, table):
+                    if not sound:
+                        raise sqlite3.DatabaseError(f"an entry of {table} does not fit its seal")
         except BaseException:
             db.close()
             raise
@@ -84,12 +110,24 @@ class Store:
                 other.rename(aside.with_name(aside.name + tail))
         return aside
 
+    def _take_over(self, aside: Path) -> int:
+        """Copy the entries of a damaged store that fit their seals, as far as it can be read."""
+        kept = 0
+        with closing(sqlite3.connect(f"{aside.absolute().as_uri()}?mode=ro", uri=True)) as old:
+            for table in _COLUMNS:
+                try:
+                    for values, sound in _entries(old, table):
+                        if sound:
+                            self._insert(table, [values], "IGNORE")
+                            kept += 1
+                except sqlite3.DatabaseError:
+                    continue
+        return kept
+
     def add_trials(self, items: Iterable[tuple[str, str, Any, Any]]) -> None:
         """Keep (key, label, trial, outcome) tuples; trial and outcome are JSON values."""
-        self._write(
-            "INSERT OR IGNORE INTO trials VALUES (?, ?, ?, ?)",
-            [(key, label, _dump(trial), _dump(outcome)) for key, label, trial, outcome in items],
-        )
+        values = [(key, label, _dump(trial), _dump(outcome)) for key, label, trial, outcome in items]
+        self._insert("trials", values, "IGNORE")
 
     def outcomes(self, label: str) -> dict[str, Any]:
         """Return the outcomes (JSON values) of all trials kept under ``label``, by key."""
@@ -107,24 +145,25 @@ class Store:
 
     def put(self, table: str, key: str, value: Any) -> None:
         """Keep ``value`` (JSON) under ``key`` in ``rows``, ``corners`` or ``meta``."""
-        self._write(f"INSERT OR REPLACE INTO {_known(table)} VALUES (?, ?)", [(key, _dump(value))])
+        self._insert(table, [(key, _dump(value))], "REPLACE")
 
     def get(self, table: str, key: str) -> Any:
         """Return the JSON value under ``key``, or None."""
-        column = {"rows": "row", "corners": "prepared", "meta": "value"}[table]
-        field = "name" if table == "meta" else "key"
-        found = self._db.execute(f"SELECT {column} FROM {_known(table)} WHERE {field} = ?", (key,)).fetchone()
+        name, column = _COLUMNS[table]
+        found = self._db.execute(f"SELECT {column} FROM {table} WHERE {name} = ?", (key,)).fetchone()
         return json.loads(found[0]) if found else None
 
-    def _write(self, statement: str, items: list[tuple[Any, ...]]) -> None:
+    def _insert(self, table: str, items: Sequence[tuple[str, ...]], otherwise: str) -> None:
+        marks = ", ".join("?" * (len(_COLUMNS[table]) + 1))
         try:
             with self._db:
-                self._db.executemany(statement, items)
-        except sqlite3.OperationalError as error:
+                self._db.executemany(
+                    f"INSERT OR {otherwise} INTO {table} VALUES ({marks})",
+                    [(*values, seal(*values)) for values in items],
+                )
+        except sqlite3.DatabaseError as error:
             raise FolderError(
-                f"the store cannot be written: {error}",
-                where=(str(self.path),),
-                todo="Free some space, or check the permissions; then run the same command again to go on.",
+                f"the store cannot be written: {error}", where=(str(self.path),), todo=_TODO_WRITE
             ) from None
 
     def close(self) -> None:
@@ -132,10 +171,13 @@ class Store:
         self._db.close()
 
 
-def _known(table: str) -> str:
-    if table not in ("rows", "corners", "meta"):
-        raise ValueError(table)
-    return table
+def _entries(db: sqlite3.Connection, table: str) -> Iterator[tuple[tuple[str, ...], bool]]:
+    """Yield the entries of a table without their seals, and whether each fits its own."""
+    try:
+        for *values, stated in db.execute(f"SELECT {', '.join(_COLUMNS[table])}, seal FROM {table}"):
+            yield tuple(values), stated == seal(*values)
+    except sqlite3.OperationalError as error:  # what cannot be decoded, or has other columns, is damage too
+        raise sqlite3.DatabaseError(str(error)) from None
 
 
 def _dump(value: Any) -> str:

@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import ctypes
 import hashlib
+import os
 import signal
+import tempfile
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
@@ -19,18 +21,22 @@ from charflow.probe.prepare import Prepared, prepare
 from charflow.sheet import Sheet
 from charflow.simulate.engine import Engine
 from charflow.simulate.session import Clock, Session
-from charflow.solve.row import Group, RowResult, solve_row
+from charflow.solve.accuracy import Accuracy, choose_settings
+from charflow.solve.row import Group, RowResult, groups_of, solve_row
 
 
 @dataclass(frozen=True)
 class Job:
-    """One piece of work, called ``name`` to people; its trials are kept under ``label``. ``known`` are outcomes (JSON) by trial key, ``poisoned`` trials that killed workers."""
+    """One piece of work, called ``name`` to people; its trials are kept under ``label``.
+
+    ``known`` are outcomes (JSON) by trial key, ``poisoned`` the keys of trials that killed workers.
+    """
 
     label: str
     name: str
     sheet: Sheet
     circuit: Circuit
-    settings: Settings
+    accuracy: Accuracy | None = None
     group: Group | None = None
     clock_slew: float = 0.0
     neighbours: tuple[RowResult, ...] = ()
@@ -40,12 +46,17 @@ class Job:
 
 @dataclass(frozen=True)
 class Done:
-    """What came of a job: a prepared corner or a solved row, and where the time went."""
+    """What came of a job: a prepared corner or a solved row, and where the time went.
+
+    Not ``whole`` where a trial was given up because it kills workers: then the next run shall try again.
+    """
 
     name: str
     clock: Clock
     prepared: Prepared | None = None
+    accuracy: Accuracy | None = None
     row: RowResult | None = None
+    whole: bool = True
 
 
 def trial_key(circuit: Circuit, settings: Settings, version: int, trial: Trial) -> str:
@@ -58,27 +69,34 @@ _journal: Journal | None = None
 _engines: dict[object, Engine] = {}
 
 
-def begin(folder: str | None) -> None:
-    """Set up a fresh worker process: dies with its parent, leaves Ctrl-C to it, opens its journal."""
+def begin(folder: str, parent: int) -> None:
+    """Set up a fresh worker process: dies with ``parent``, leaves Ctrl-C to it, opens its journal.
+
+    Its temporary files go to ``folder`` too, which the next run empties if this one is killed.
+    """
     global _journal  # noqa: PLW0603  # one journal a process
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     ctypes.CDLL(None).prctl(1, signal.SIGKILL)  # PR_SET_PDEATHSIG
-    if folder is not None:
-        _journal = Journal(Path(folder))
+    if os.getppid() != parent:  # it ended before that took hold
+        os._exit(1)
+    tempfile.tempdir = folder
+    _journal = Journal(Path(folder))
 
 
 class Bench:
     """Evaluates the trials of one job: from what is known, else in ngspice. Counts what the job needed."""
 
-    def __init__(self, job: Job, circuit: Circuit) -> None:
+    def __init__(self, job: Job, circuit: Circuit, settings: Settings) -> None:
         self.job = job
         self.circuit = circuit
+        self.settings = settings
         self.version = Session.here().version
         self.needed: dict[Trial, Outcome] = {}
+        self.whole = True
 
     def key_of(self, trial: Trial) -> str:
         """Return the key of ``trial``."""
-        return trial_key(self.circuit, self.job.settings, self.version, trial)
+        return trial_key(self.circuit, self.settings, self.version, trial)
 
     def __call__(self, trial: Trial) -> Outcome:
         """Return the outcome of ``trial``."""
@@ -91,9 +109,10 @@ class Bench:
         if key in self.job.known:
             return outcome_from(self.job.known[key])
         if key in self.job.poisoned:
+            self.whole = False
             raise WorkerDied("the simulator died or hung twice on this trial")
         _say(begin=key)
-        outcome = _engine(self.circuit, self.job.settings).run(trial)
+        outcome = _engine(self.circuit, self.settings).run(trial)
         _say(key=key, label=self.job.label, trial=trial_to(trial), outcome=outcome_to(outcome))
         return outcome
 
@@ -115,20 +134,30 @@ def work(job: Job) -> Done:
     _say(job=job.name)
     session = Session.here()
     before = replace(session.clock)
-    prepared = row = None
-    if job.group is None:
-        prepared = prepare(lambda circuit: Bench(job, circuit), job.sheet, job.circuit)
-    else:
-        bench = Bench(job, job.circuit)
-        row = solve_row(
-            bench,
-            lambda: len(bench.needed),
-            bench.key_of,
-            job.sheet,
-            job.group,
-            job.circuit.corner,
-            job.clock_slew,
-            job.neighbours,
-        )
+    if job.group is None or job.accuracy is None:
+        return _prepare(job, before)
+    bench = Bench(job, job.circuit, job.accuracy.settings)
+    row = solve_row(
+        bench,
+        lambda: len(bench.needed),
+        bench.key_of,
+        job.sheet,
+        job.group,
+        job.circuit.corner,
+        job.clock_slew,
+        job.neighbours,
+        (job.accuracy.delay_share, job.accuracy.constraint),
+    )
     _say(done=job.name)
-    return Done(job.name, session.clock - before, prepared, row)
+    return Done(job.name, session.clock - before, row=row, whole=bench.whole)
+
+
+def _prepare(job: Job, before: Clock) -> Done:
+    """Prove the function of a corner and choose its rest time and settings."""
+    prepared = prepare(lambda circuit: Bench(job, circuit, Settings()), job.sheet, job.circuit)
+    rested = prepared.circuit
+    accuracy = choose_settings(
+        lambda settings: Bench(job, rested, settings), job.sheet, groups_of(job.sheet), rested.corner
+    )
+    _say(done=job.name)
+    return Done(job.name, Session.here().clock - before, prepared, accuracy)

@@ -17,6 +17,8 @@ from charflow.plan.trial import Start, Trial
 
 PREAMBLE_RAMP = 1 / 40  # rail-to-rail ramp of the settling vectors, as a fraction of the rest time
 
+LONGEST_STEP = 15  # the window in steps, where nothing happens; elsewhere the error control decides
+
 
 @dataclass(frozen=True)
 class Settings:
@@ -27,12 +29,12 @@ class Settings:
     """
 
     name: str = "standard"
-    reltol: float = 1e-5
+    reltol: float = 1e-6
     trtol: float = 1.0
     method: str = "trap"
     max_step: float | None = None
     nudge: float = 0.0
-    extra: tuple[tuple[str, float], ...] = ()
+    extra: tuple[tuple[str, float], ...] = (("bypass", 1.0),)
 
     @property
     def options(self) -> dict[str, str]:
@@ -59,7 +61,7 @@ def span(circuit: Circuit, trial: Trial, settings: Settings, *, warm: bool) -> S
     """Return the time axis of the deck of ``trial``."""
     rest = 0.0 if warm else circuit.rest * len(trial.start.vectors)
     zero = rest - begins(trial, circuit.fractions)
-    return Span(zero, zero + trial.until, settings.max_step or (trial.until + zero - rest) / 50)
+    return Span(zero, zero + trial.until, settings.max_step or (trial.until + zero - rest) / LONGEST_STEP)
 
 
 def source_points(circuit: Circuit, trial: Trial, pin: str, at: Span, *, warm: bool) -> Waveform:

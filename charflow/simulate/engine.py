@@ -29,19 +29,14 @@ STANDARD = Settings()
 
 def ladder(settings: Settings) -> tuple[Settings, ...]:
     """Return the settings tried in turn on a trial that does not converge, the given ones first."""
+    plain = replace(settings, nudge=1e-15, extra=(("bypass", 0.0), ("gmin", 1e-12)))
+    shunted = (("bypass", 0.0), ("gmin", 1e-11), ("itl4", 200.0))
     return (
-        settings,
-        replace(settings, name="nudged", nudge=1e-15),
-        replace(settings, name="gear", nudge=1e-15, method="gear"),
-        replace(settings, name="gear, gmin 1e-11", nudge=1e-15, method="gear", extra=(("gmin", 1e-11),)),
-        replace(
-            settings,
-            name="gear, loose",
-            nudge=1e-15,
-            method="gear",
-            reltol=settings.reltol * 10,
-            extra=(("gmin", 1e-11), ("itl4", 200.0)),
-        ),
+        replace(settings, extra=(*settings.extra, ("gmin", 1e-12))),
+        replace(plain, name="nudged"),
+        replace(plain, name="gear", method="gear"),
+        replace(plain, name="gear, gmin 1e-11", method="gear", extra=shunted),
+        replace(plain, name="gear, loose", method="gear", reltol=settings.reltol * 10, extra=shunted),
     )
 
 

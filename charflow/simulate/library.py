@@ -51,9 +51,12 @@ def library_version() -> int:
     """Return the major version of libngspice, asked in a process of its own: this one stays clean."""
     find_library()
     code = "from charflow.simulate.session import Session; print('version', Session.here().version)"
-    done = subprocess.run(
-        [sys.executable, "-c", code], capture_output=True, text=True, timeout=120, check=False
-    )
+    try:
+        done = subprocess.run(
+            [sys.executable, "-c", code], capture_output=True, text=True, timeout=120, check=False
+        )
+    except (OSError, subprocess.TimeoutExpired) as error:
+        raise SimulatorError(f"the ngspice library could not be tried: {error}") from None
     words = done.stdout.split()
     if done.returncode or words[-2:-1] != ["version"] or not words[-1].isdigit():
         reason = (done.stderr.strip().splitlines() or ["it said nothing"])[-1]

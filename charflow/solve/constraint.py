@@ -48,14 +48,10 @@ def solve_constraint(
                 todo="The clock slew is so slow that the output moves before the clock's 50 % point.",
             )
     fractions, limit = sheet.measure.slew_fractions, sheet.measure.pushout
-    clock = ramp_time(condition.clock_slew, fractions)
-    data = ramp_time(condition.data_slew or 0.0, fractions)
-    tail = 2 * (1 + limit) * slowest + 2 * max(reference.transitions.values())
     deciding: dict[float, Trial] = {}
 
     def measure(offset: float, longer: float = 1.0) -> float | None:
-        after = -offset if arc.kind is Kind.SETUP else offset  # when the data edge comes
-        until = max(clock / 2, after + data / 2) + tail * longer
+        until = window(sheet, arc, condition, reference, offset, longer)
         for _ in range(PATIENCE):
             trial = deciding[offset] = at_offset(sheet, arc, condition, offset, until)
             try:
@@ -64,13 +60,14 @@ def solve_constraint(
                 until *= 2
         return None
 
-    reach = slowest + clock / 2 + data / 2
+    ramps = ramp_time(condition.clock_slew, fractions) + ramp_time(condition.data_slew or 0.0, fractions)
+    reach = slowest + ramps / 2
     search = Search(
         measure,
         limit,
         sheet.measure.resolution,
-        safe=2 * reach,
-        unsafe=-2 * reach,
+        safe=reach,
+        unsafe=-reach,
         lookout=(reach / 2,) if lookout else (),
         confirm=lambda offset: measure(offset, longer=LATE),
     )
@@ -78,3 +75,21 @@ def solve_constraint(
     return Constraint(
         crossing.value, crossing, deciding.get(crossing.passes) if crossing.value is not None else None
     )
+
+
+def window(
+    sheet: Sheet, arc: Arc, condition: Condition, reference: Reference, offset: float, longer: float = 1.0
+) -> float:
+    """Return where [s] the transient of a trial at ``offset`` [s] may end.
+
+    After the last ramp there is time for every output to be about as late again as the pushout allows,
+    and to reach its rail twice over; so a capture that comes too late is still seen and measured.
+    """
+    fractions = sheet.measure.slew_fractions
+    after = -offset if arc.kind is Kind.SETUP else offset  # when the data edge comes
+    ramps = (
+        ramp_time(condition.clock_slew, fractions) / 2,
+        after + ramp_time(condition.data_slew or 0.0, fractions) / 2,
+    )
+    slowest, slowly = max(reference.delays.values()), max(reference.transitions.values())
+    return max(ramps) + longer * (2 * (1 + sheet.measure.pushout) * slowest + 2 * slowly)

@@ -27,6 +27,8 @@ from dataclasses import dataclass, field
 from enum import StrEnum
 from itertools import pairwise
 
+SURVEY = (1.0, 0.5, 0.25, 0.1, 0.0, -0.1, -0.25, -0.5, -1.0)  # parts of the range, denser about its middle
+FAR = 4  # how far beyond the surveyed range a search may go, in units of that range
 MEASURABLE = 2e-4  # pushouts smaller than this, relative to the limit's own 1, are noise of the transient
 
 
@@ -57,13 +59,20 @@ class Sample:
         return math.log(self.push / limit)
 
 
+Shape = tuple[tuple[float, float], ...]  # (log of pushout over limit, offset from the crossing [s]), sorted
+
+
 @dataclass(frozen=True)
 class Guess:
-    """Where the crossing is expected [s], how sure that is [s], and how fast log pushout falls [s per e]."""
+    """Where the crossing is expected [s], how sure that is [s], and how fast log pushout falls [s per e].
+
+    ``shape`` is the curve of a similar point, which says more than one slope does.
+    """
 
     offset: float
     spread: float
     slope: float
+    shape: Shape = ()
 
 
 @dataclass(frozen=True)
@@ -87,8 +96,9 @@ class Crossing:
 class Search:
     """One search. ``measure`` maps an offset [s] to a pushout or None.
 
-    ``safe`` and ``unsafe`` [s] bound the offsets tried, ``resolution`` [s] is the widest final bracket,
-    ``survey`` the number of coarse steps without a guess, ``lookout`` the distances [s] above a crossing
+    ``safe`` and ``unsafe`` [s] bound the survey (a search goes beyond them, up to :data:`FAR` times their
+    distance, only where it must), ``resolution`` [s] is the widest final bracket,
+    ``lookout`` the distances [s] above a crossing
     found from a guess at which the curve must still pass. ``confirm`` measures the passing side of a cliff
     once more with more patience: a register on the edge may lose its value late.
     """
@@ -98,19 +108,20 @@ class Search:
     resolution: float
     safe: float
     unsafe: float
-    survey: int = 6
     lookout: tuple[float, ...] = ()
     confirm: Callable[[float], float | None] | None = None
     samples: list[Sample] = field(default_factory=list)
+    shape: Shape = ()
 
     def run(self, guess: Guess | None) -> Crossing:
         """Return the crossing next to the safe side."""
         slope = guess.slope if guess else (self.safe - self.unsafe) / 60
+        self.shape = guess.shape if guess else ()
         self._bracket(guess) if guess else self._walk()
         distances = list(self.lookout) if guess else []
         while self.fails is not None and self.passes is not None:
             self._close(slope)
-            while distances and self.passes.offset + distances[0] < self.safe:
+            while distances:
                 if not self._try(self.passes.offset + distances.pop(0)).passes(self.limit):
                     self._climb(slope)
                     break
@@ -150,37 +161,38 @@ class Search:
         return False
 
     def _walk(self) -> None:
-        """Survey from the safe end down to the first failing offset."""
-        step = (self.safe - self.unsafe) / self.survey
-        for index in range(self.survey + 1):
-            if not self._try(self.safe - index * step).passes(self.limit):
-                return
+        """Survey from the safe end down to the first failing offset; without one, on in growing steps."""
+        middle, half = (self.safe + self.unsafe) / 2, (self.safe - self.unsafe) / 2
+        for part in (*SURVEY, *(-(2.0**power) for power in range(1, 4))):
+            if not self._try(middle + part * half).passes(self.limit):
+                break
+        if self.passes is None:
+            self._climb(half / 4)
 
     def _climb(self, step: float) -> None:
         """Step to the safe side until an offset passes."""
-        while self.passes is None and self.fails is not None and self.fails.offset < self.safe:
-            self._try(min(self.fails.offset + step, self.safe))
+        last = self.safe + FAR * (self.safe - self.unsafe)
+        while self.passes is None and self.fails is not None and self.fails.offset < last:
+            self._try(min(self.fails.offset + step, last))
             step *= 3
 
     def _bracket(self, guess: Guess) -> None:
         """Find one passing and one failing offset around the guess, steps growing threefold."""
-        self._try(self._inside(guess.offset))
+        reach = FAR * (self.safe - self.unsafe)
+        # A capture that comes late can be measured, one that does not come cannot: err to the safe side.
+        self._try(guess.offset + (guess.slope if guess.spread > 2.5 * guess.slope else 0.0))
         step = max(guess.spread, 2 * self.resolution)
         while self.passes is None or self.fails is None:
-            low, high = self.fails, self.passes
-            edge = low or high
+            up = self.passes is None
+            edge = self.fails if up else self.passes
             assert edge is not None
-            up = high is None
-            if edge.offset == (self.safe if up else self.unsafe):
+            if not self.unsafe - reach < edge.offset < self.safe + reach:
                 return
             root = self._predicted(guess.slope)
             over = step if edge.height(self.limit) is None else 0.4 * self.resolution
             aim = edge.offset if root is None else max(root, edge.offset) if up else min(root, edge.offset)
-            self._try(self._inside(aim + over if up else aim - over))
+            self._try(aim + over if up else aim - over)
             step *= 3
-
-    def _inside(self, offset: float) -> float:
-        return min(max(offset, self.unsafe), self.safe)
 
     def _close(self, slope: float) -> None:
         """Shrink the bracket to the resolution."""
@@ -222,7 +234,11 @@ class Search:
         return aim if low + margin < aim < high - margin else None
 
     def _predicted(self, slope: float) -> float | None:
-        """Return the root of log pushout through the measurable samples nearest to it."""
+        """Return the root of log pushout through the measurable samples nearest to it.
+
+        Each sample alone puts the root where the expected shape says; what two of them disagree on is
+        extrapolated to zero (a secant on the residual of the shape).
+        """
         points = sorted(
             (
                 (abs(h), h, s.offset)
@@ -232,18 +248,19 @@ class Search:
         )[:3]
         if not points:
             return None
-        (_, h0, x0), *rest = points
+        roots = [(h, x - along(self.shape, h, slope)) for _, h, x in points]
+        (h0, r0), *rest = roots
         if not rest:
-            return x0 + h0 * slope
-        _, h1, x1 = rest[0]
+            return r0
+        (h1, r1) = rest[0]
+        (_, _, x0), (_, _, x1), *_ = points
         if h1 == h0 or (x1 - x0) / (h1 - h0) > 0:  # not falling: the pair says nothing
-            return x0 + h0 * slope
-        if len(rest) == 2 and abs(h0) < 1.5:
-            _, h2, x2 = rest[1]
-            curved = _inverse_quadratic((h0, x0), (h1, x1), (h2, x2))
+            return r0
+        if len(rest) == 2 and abs(h0) < 1.5 and not self.shape:
+            curved = _inverse_quadratic(*((h, x) for _, h, x in points))
             if curved is not None:
                 return curved
-        return x0 - h0 * (x1 - x0) / (h1 - h0)
+        return r0 - h0 * (r1 - r0) / (h1 - h0)
 
     def _crossing(self, slope: float) -> Crossing:
         assert self.passes is not None
@@ -271,6 +288,32 @@ class Search:
         low = self.fails.offset if self.fails else self.unsafe
         high = self.passes.offset if self.passes else self.safe
         return Crossing(ending, value, low, high, tuple(self.samples), slope)
+
+
+def along(shape: Shape, height: float, slope: float) -> float:
+    """Return the offset from the crossing [s] at which ``shape`` has this log pushout; beyond it, straight on."""
+    if len(shape) < 2:
+        return -slope * height
+    for (h0, x0), (h1, x1) in pairwise(shape):
+        if height <= h1 or (h1, x1) == shape[-1]:
+            if height < h0:
+                return x0 - slope * (height - h0)
+            if height > h1:
+                return x1 - slope * (height - h1)
+            return x0 + (x1 - x0) * (height - h0) / (h1 - h0)
+    raise AssertionError(shape)
+
+
+def shape_of(crossing: Crossing, limit: float) -> Shape:
+    """Return the measured curve around a crossing, thinned to where it falls."""
+    if crossing.value is None:
+        return ()
+    points = [(h, s.offset - crossing.value) for s in crossing.samples if (h := s.height(limit)) is not None]
+    kept: list[tuple[float, float]] = []
+    for h, x in sorted([*((h, x) for h, x in points if 0.15 < abs(h) < 5), (0.0, 0.0)]):
+        if not kept or (x < kept[-1][1] and h - kept[-1][0] > 0.1):
+            kept.append((h, x))
+    return tuple(kept) if any(h == 0.0 for h, _ in kept) else ()
 
 
 def _inverse_quadratic(*points: tuple[float, float]) -> float | None:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import csv
 import io
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, fields
 
 from charflow.errors import InputError
@@ -37,6 +37,8 @@ class Row:
 
 COLUMNS = tuple(field.name for field in fields(Row))
 _NUMBERS = {"clock_slew_ps", "data_slew_ps", "load_ff", "value_ps", "bracket_ps"}
+_ALWAYS = {"clock_slew_ps", "load_ff", "transients"}
+_LARGEST = 1e15
 
 
 def row_of(answer: Answer) -> Row:
@@ -79,7 +81,7 @@ def to_csv(rows: Iterable[Row]) -> str:
 def _text(value: object) -> str:
     if value is None:
         return ""
-    return f"{value:.10g}" if isinstance(value, float) else str(value)
+    return f"{value:.15g}" if isinstance(value, float) else str(value)
 
 
 def from_csv(text: str, origin: str) -> tuple[Row, ...]:
@@ -107,14 +109,32 @@ def _row(cells: dict[str, str], place: str) -> Row:
     for name in (*_NUMBERS, "transients"):
         text = cells[name]
         try:
-            number = None if text == "" else int(text) if name == "transients" else float(text)
+            values[name] = None if text == "" else int(text) if name == "transients" else float(text)
         except ValueError:
             raise InputError(f"{name}: {text!r} is not a number", where=(place,)) from None
-        if number is None and name in ("clock_slew_ps", "load_ff", "transients"):
+    return row_from(values, place)
+
+
+def row_from(values: Mapping[str, object], place: str) -> Row:
+    """Return the row of ``values`` by column. Raises :class:`InputError` naming ``place`` and column."""
+    for name in COLUMNS:
+        if name not in values:
+            raise InputError(f"the column {name} is missing", where=(place,))
+        value = values[name]
+        if name == "transients" or name in _NUMBERS:
+            _check_number(name, value, place)
+        elif not isinstance(value, str):
+            raise InputError(f"{name}: {value!r} is not text", where=(place,))
+    if values["quantity"] not in {kind.value for kind in Kind}:
+        raise InputError(f"quantity: {values['quantity']!r} is not known", where=(place,))
+    return Row(**{name: values[name] for name in COLUMNS})  # type: ignore[arg-type]  # each was just checked
+
+
+def _check_number(name: str, value: object, place: str) -> None:
+    if value is None:
+        if name in _ALWAYS:
             raise InputError(f"{name} is empty", where=(place,))
-        if number is not None and not abs(number) < 1e15:
-            raise InputError(f"{name}: {text!r} is not a finite number", where=(place,))
-        values[name] = number
-    if cells["quantity"] not in {kind.value for kind in Kind}:
-        raise InputError(f"quantity: {cells['quantity']!r} is not known", where=(place,))
-    return Row(**values)  # type: ignore[arg-type]  # every field was just checked
+    elif isinstance(value, bool) or not isinstance(value, int if name == "transients" else int | float):
+        raise InputError(f"{name}: {value!r} is not a number", where=(place,))
+    elif not abs(value) < _LARGEST:
+        raise InputError(f"{name}: {value!r} is not a finite number", where=(place,))

@@ -5,7 +5,8 @@ from __future__ import annotations
 import json
 import os
 from collections.abc import Sequence
-from dataclasses import asdict, dataclass, fields
+from contextlib import suppress
+from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
 
@@ -14,7 +15,7 @@ from charflow.campaign.run import RunResult
 from charflow.errors import FolderError
 from charflow.sheet import Sheet
 from charflow.sheet.units import Unit, show
-from charflow.tables.flat import Row, row_of, to_csv
+from charflow.tables.flat import Row, row_from, row_of, to_csv
 from charflow.tables.text import CAUTION, to_markdown
 
 FORMAT = 1
@@ -38,7 +39,7 @@ def tables_of(sheet: Sheet, result: RunResult) -> Tables:
             "models": [Path(spec).name for spec in corner.models],
             "supply_v": corner.supply,
             "temperature_c": corner.temperature,
-            "rest_s": result.rests[name].seconds if name in result.rests else None,
+            **_proved(result, name),
         }
         for name, corner in sheet.corners.items()
         if any(row.corner == name for row in rows)
@@ -56,6 +57,20 @@ def tables_of(sheet: Sheet, result: RunResult) -> Tables:
     return Tables(name, tuple(_conditions(sheet, corners)), facts, rows)
 
 
+def _proved(result: RunResult, corner: str) -> dict[str, Any]:
+    """Return what preparing a corner showed: rest, settings, and what they leave uncertain."""
+    rest, accuracy = result.rests[corner], result.accuracy[corner]
+    return {
+        "rest_s": rest.seconds,
+        "rest_doubled_moved": rest.moved,
+        "flips_checked": rest.flips,
+        "reltol": accuracy.settings.reltol,
+        "method": accuracy.settings.method,
+        "delays_converged_to_fraction": accuracy.delay_share,
+        "constraints_converged_to_ps": accuracy.constraint * 1e12,
+    }
+
+
 def _conditions(sheet: Sheet, corners: dict[str, Any]) -> list[str]:
     low, high = sheet.measure.slew_fractions
     lines = [
@@ -63,7 +78,8 @@ def _conditions(sheet: Sheet, corners: dict[str, Any]) -> list[str]:
         for name, facts in corners.items()
     ]
     lines.append(
-        f"delays and offsets from 50 % to 50 % of supply; slews and transitions between {low:.0%} and {high:.0%}"
+        f"delays and offsets from 50 % to 50 % of supply; "
+        f"slews and transitions between {low:.0%} and {high:.0%}"
     )
     load = show(sheet.axes.constraint_load, Unit.FARAD)
     lines.append(
@@ -78,6 +94,11 @@ def write_tables(folder: Path, tables: Tables) -> None:
     _replace(folder / "tables.csv", to_csv(tables.rows))
     _replace(folder / "tables.json", to_json(tables))
     _replace(folder / "tables.md", to_markdown(tables.cell, tables.conditions, tables.rows))
+
+
+def keep_sheet(folder: Path, text: str) -> None:
+    """Write the copy of the sheet, as it was read, into the run folder."""
+    _replace(folder / "sheet.toml", text)
 
 
 def to_json(tables: Tables) -> str:
@@ -102,16 +123,15 @@ def read_tables(folder: Path) -> Tables:
             raise FolderError(
                 f"tables of format {raw['format']!r}, this charflow reads {FORMAT}", where=(str(path),)
             )
-        names = {field.name for field in fields(Row)}
-        rows = tuple(Row(**{name: row[name] for name in names}) for row in raw["rows"])
-        return Tables(raw["cell"], tuple(raw["conditions"]), raw["facts"], rows)
+        rows = tuple(row_from(dict(row), f"{path}: row {n}") for n, row in enumerate(raw["rows"], start=1))
+        return Tables(str(raw["cell"]), tuple(map(str, raw["conditions"])), dict(raw["facts"]), rows)
     except FileNotFoundError:
         raise FolderError(
             "the folder holds no tables",
             where=(str(folder),),
             todo="Make them with charflow run SHEET --out DIR.",
         ) from None
-    except (ValueError, KeyError, TypeError) as error:
+    except (ValueError, KeyError, TypeError, RecursionError) as error:
         raise FolderError(f"the tables cannot be read: {error!r}", where=(str(path),)) from None
     except OSError as error:
         raise FolderError(f"the tables cannot be read: {error.strerror}", where=(str(path),)) from None
@@ -123,7 +143,8 @@ def _replace(path: Path, text: str) -> None:
         part.write_text(text, encoding="utf-8")
         os.replace(part, path)  # noqa: PTH105  # atomic on one file system
     except OSError as error:
-        part.unlink(missing_ok=True)
+        with suppress(OSError):
+            part.unlink(missing_ok=True)
         raise FolderError(f"the file cannot be written: {error.strerror}", where=(str(path),)) from None
 
 

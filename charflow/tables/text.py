@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import html
+import re
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
@@ -57,7 +58,12 @@ def to_markdown(cell: str, conditions: Sequence[str], rows: Sequence[Row]) -> st
 
 
 def _plain(text: str) -> str:
-    return html.escape(text, quote=False).replace("|", "\\|").replace("`", "'")
+    """Return ``text`` so that Markdown shows it as it is: no tags, links, emphasis or line of its own."""
+    shown = " ".join("".join(c if c.isprintable() else " " for c in text).split())
+    return html.escape(_MARKS.sub(r"\\\g<0>", shown), quote=False)
+
+
+_MARKS = re.compile(r"[\\`*\[\]!|~#$]|(?<![A-Za-z0-9])_|_(?![A-Za-z0-9])")
 
 
 def print_tables(console: Console, rows: Sequence[Row]) -> None:

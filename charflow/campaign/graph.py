@@ -1,0 +1,54 @@
+"""The jobs of a run and what each must wait for: the sheet alone decides, so every run solves the same rows.
+
+Rows of one corner teach each other where to look; corners do not, so that new models at one corner leave
+the answers of the others as they are.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from charflow.sheet import Sheet
+from charflow.solve.order import ends_then_middles
+from charflow.solve.row import Group, groups_of
+
+
+@dataclass
+class Node:
+    """One job: its label, the labels of what must be done before it, and how often it was lost.
+
+    Without a ``group`` it prepares its corner. ``points`` counts the values it gives.
+    """
+
+    label: str
+    corner: str
+    group: Group | None
+    clock_slew: float
+    after: tuple[str, ...]
+    points: int
+    losses: int = 0
+
+
+def nodes_of(sheet: Sheet, corners: tuple[str, ...]) -> list[Node]:
+    """Return the jobs of a run: one preparation a corner, then its rows, teachers before pupils."""
+    slews = sheet.axes.clock_slew
+    nodes = []
+    for corner in corners:
+        prepare = f"{corner}: preparing"
+        nodes.append(Node(prepare, corner, None, 0.0, (), 0))
+        for number, group in enumerate(groups_of(sheet)):
+            points = len(group.delays) * len(sheet.axes.load) * 2
+            points += len(group.constraints) * len(sheet.axes.data_slew)
+            for index, near in ends_then_middles(len(slews), last_first=True):
+                teachers = [row_label(corner, number, slews[i]) for i in near]
+                teachers += [
+                    row_label(corner, other, slews[i]) for other in group.needs for i in (index, *near)
+                ]
+                label = row_label(corner, number, slews[index])
+                nodes.append(Node(label, corner, group, slews[index], (prepare, *teachers), points))
+    return nodes
+
+
+def row_label(corner: str, group: int, clock_slew: float) -> str:
+    """Return what people call a row."""
+    return f"{corner}: group {group + 1}, clock slew {clock_slew * 1e12:g} ps"

@@ -1,0 +1,255 @@
+"""The work of a run: whatever is ready and not in the store goes to the pool, until all is solved."""
+
+from __future__ import annotations
+
+import hashlib
+import time
+from collections.abc import Callable, Iterator
+from concurrent.futures import FIRST_COMPLETED, Future, wait
+from dataclasses import asdict, dataclass, field, replace
+
+from charflow.campaign.codec import accuracy_from, accuracy_to, row_from, row_to
+from charflow.campaign.graph import Node, nodes_of
+from charflow.campaign.journal import Follower
+from charflow.campaign.pool import Pool, kill
+from charflow.campaign.store import Store
+from charflow.campaign.worker import Done, Job
+from charflow.errors import CharflowError, InputError, SimulatorError
+from charflow.plan.circuit import Circuit
+from charflow.probe.rest import Rest
+from charflow.sheet import Sheet
+from charflow.simulate.session import Clock
+from charflow.solve.accuracy import Accuracy
+from charflow.solve.row import RowResult, lost_row
+
+TRIAL_LIMIT = 120.0  # s without a sign of life from a worker at work on a trial
+
+
+@dataclass
+class Progress:
+    """How far a run is; times in seconds. ``left`` is None until there is something to judge by."""
+
+    points: int = 0
+    points_total: int = 0
+    transients: int = 0
+    elapsed: float = 0.0
+    left: float | None = None
+    doing: str = ""
+
+
+@dataclass
+class Campaign:
+    """The state of a run: what it works on, and what it has so far."""
+
+    sheet: Sheet
+    corners: tuple[str, ...]
+    circuits: dict[str, Circuit]
+    store: Store
+    follower: Follower
+    version: int
+    tell: Callable[[Progress], None]
+    began: float = field(default_factory=time.monotonic)
+    progress: Progress = field(default_factory=Progress)
+    clock: Clock = field(default_factory=Clock)
+    rests: dict[str, Rest] = field(default_factory=dict)
+    accuracy: dict[str, Accuracy] = field(default_factory=dict)
+    rows: dict[str, RowResult] = field(default_factory=dict)
+    deaths: dict[str, int] = field(default_factory=dict)
+    row_keys: dict[str, str] = field(default_factory=dict)
+
+
+def drive(campaign: Campaign, make_pool: Callable[[], Pool], stopped: Callable[[], bool]) -> None:
+    """Run the graph to its end. Raises :class:`KeyboardInterrupt` once ``stopped()``, between two steps."""
+    waiting = {node.label: node for node in nodes_of(campaign.sheet, campaign.corners)}
+    campaign.progress.points_total = sum(node.points for node in waiting.values())
+    for _ in _ready(campaign, waiting):
+        pass
+    if not waiting:
+        _tell(campaign)
+        return
+    running: dict[Future[Done], Node] = {}
+    seen: dict[int, float] = {}
+    with make_pool() as pool:
+        while waiting or running:
+            for node in _ready(campaign, waiting):
+                del waiting[node.label]
+                running[pool.submit(_job(campaign, node))] = node
+            finished, _ = wait(running, timeout=0.2, return_when=FIRST_COMPLETED)
+            absorb(campaign, seen)
+            for future in finished:
+                node = running.pop(future)
+                if not _settle(campaign, node, future):
+                    waiting[node.label] = node
+            _watch(campaign, seen)
+            _tell(campaign)
+            if stopped():
+                raise KeyboardInterrupt
+
+
+def absorb(campaign: Campaign, seen: dict[int, float] | None = None) -> None:
+    """Move what the journals say into the store; note in ``seen`` when each process gave a sign of life."""
+    items = []
+    for process, event in campaign.follower.new():
+        if seen is not None:
+            seen[process] = time.monotonic()
+        if "key" in event:
+            items.append((event["key"], event["label"], event["trial"], event["outcome"]))
+    if items:
+        campaign.store.add_trials(items)
+    if seen is not None:
+        campaign.progress.transients += len(items)
+
+
+def _ready(campaign: Campaign, waiting: dict[str, Node]) -> Iterator[Node]:
+    """Yield the nodes that can start; those already in the store are taken from it instead."""
+    again = True
+    while again:
+        again = False
+        for node in list(waiting.values()):
+            if not all(_known(campaign, label) for label in node.after):
+                continue
+            if _from_store(campaign, node):
+                del waiting[node.label]
+                again = True
+            elif not again:
+                yield node
+
+
+def _known(campaign: Campaign, label: str) -> bool:
+    return label in campaign.rows or label.removesuffix(": preparing") in campaign.rests
+
+
+def _from_store(campaign: Campaign, node: Node) -> bool:
+    key = _key(campaign, node)
+    if node.group is None:
+        raw = campaign.store.get("corners", key)
+        if raw is None:
+            return False
+        _prepared(campaign, node.corner, Rest(**raw["rest"]), accuracy_from(raw["accuracy"]))
+        return True
+    raw = campaign.store.get("rows", key)
+    if raw is None:
+        return False
+    _solved(campaign, node, row_from(raw))
+    return True
+
+
+def _key(campaign: Campaign, node: Node) -> str:
+    """Return the store key of a node: a digest of everything its result follows from."""
+    sheet = campaign.sheet
+    facts = [campaign.circuits[node.corner].digest, str(campaign.version)]
+    if node.group is None:
+        facts += [
+            "prepare",
+            repr(sheet.pins),
+            repr(sheet.cell.next_state),
+            repr(sheet.axes),
+            repr(sheet.measure),
+        ]
+    else:
+        facts += [repr(campaign.circuits[node.corner].rest), repr(campaign.accuracy[node.corner])]
+        facts += [repr(node.group), repr(node.clock_slew)]
+        facts += [repr(sheet.axes), repr(sheet.measure)]
+        facts += [campaign.row_keys.get(label, "") for label in node.after]
+    key = hashlib.sha256("\n".join(facts).encode()).hexdigest()[:32]
+    campaign.row_keys[node.label] = key
+    return key
+
+
+def _trial_label(campaign: Campaign, node: Node) -> str:
+    """Return the label trials are kept under: what stays the same when axes or pushout change."""
+    facts = (
+        campaign.circuits[node.corner].digest,
+        repr(node.group and node.group.start),
+        repr(node.clock_slew),
+    )
+    return hashlib.sha256("\n".join(facts).encode()).hexdigest()[:24]
+
+
+def _job(campaign: Campaign, node: Node) -> Job:
+    label = _trial_label(campaign, node)
+    known_rows = [campaign.rows[name] for name in node.after if name in campaign.rows]
+    if node.corner in campaign.accuracy and node.clock_slew == campaign.sheet.axes.clock_slew[-1]:
+        known_rows.append(campaign.accuracy[node.corner].taught)  # found while settings were chosen
+    return Job(
+        label=label,
+        name=node.label,
+        sheet=campaign.sheet,
+        circuit=campaign.circuits[node.corner],
+        accuracy=campaign.accuracy.get(node.corner),
+        group=node.group,
+        clock_slew=node.clock_slew,
+        neighbours=tuple(known_rows),
+        known=campaign.store.outcomes(label),
+        poisoned=frozenset(key for key, count in campaign.deaths.items() if count > 1),
+    )
+
+
+def _settle(campaign: Campaign, node: Node, future: Future[Done]) -> bool:
+    """Take the result of a finished job; return False if it must run again."""
+    try:
+        done = future.result()
+    except (InputError, SimulatorError):
+        raise
+    except CharflowError as error:
+        raise error.at(str(campaign.sheet.path)) from None
+    except Exception as error:
+        return _lost(campaign, node, error)
+    campaign.clock = campaign.clock + done.clock
+    key = campaign.row_keys[node.label]
+    if done.prepared is not None and done.accuracy is not None:
+        rest, accuracy = done.prepared.rest, done.accuracy
+        campaign.store.put("corners", key, {"rest": asdict(rest), "accuracy": accuracy_to(accuracy)})
+        _prepared(campaign, node.corner, rest, accuracy)
+    if done.row is not None:
+        if done.whole:
+            campaign.store.put("rows", key, row_to(done.row))
+        _solved(campaign, node, done.row)
+    return True
+
+
+def _lost(campaign: Campaign, node: Node, error: Exception) -> bool:
+    """Note which trial a dead worker was at; the job runs again, the trial at most once more."""
+    node.losses += 1
+    culprit = next((trial for job, trial in campaign.follower.busy.values() if job == node.label), "")
+    campaign.follower.busy = {p: v for p, v in campaign.follower.busy.items() if v[0] != node.label}
+    if culprit:
+        campaign.deaths[culprit] = campaign.deaths.get(culprit, 0) + 1
+        return False
+    if node.losses < 2:
+        return False
+    if node.group is None:
+        raise SimulatorError(
+            f"the worker process died twice while preparing corner {node.corner!r} ({error})",
+            todo="Try charflow doctor; a model may crash ngspice.",
+        )
+    reason = f"the worker process died twice on this row ({error})"
+    _solved(campaign, node, lost_row(campaign.sheet, node.group, node.corner, node.clock_slew, reason))
+    return True
+
+
+def _prepared(campaign: Campaign, corner: str, rest: Rest, accuracy: Accuracy) -> None:
+    campaign.rests[corner], campaign.accuracy[corner] = rest, accuracy
+    campaign.circuits[corner] = campaign.circuits[corner].rested(rest.seconds)
+
+
+def _solved(campaign: Campaign, node: Node, row: RowResult) -> None:
+    campaign.rows[node.label] = row
+    campaign.progress.points += node.points
+
+
+def _watch(campaign: Campaign, seen: dict[int, float]) -> None:
+    """End workers that have been silent at a trial for longer than the limit."""
+    now = time.monotonic()
+    for process in list(campaign.follower.busy):
+        if now - seen.get(process, now) > TRIAL_LIMIT:
+            seen[process] = now
+            kill(process)
+
+
+def _tell(campaign: Campaign) -> None:
+    progress = campaign.progress
+    progress.elapsed = time.monotonic() - campaign.began
+    share = progress.points / progress.points_total if progress.points_total else 1.0
+    progress.left = progress.elapsed * (1 / share - 1) if share > 0.05 else None
+    campaign.tell(replace(progress))
