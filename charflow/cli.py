@@ -160,6 +160,55 @@ def plan(sheet: Path, decks: Path | None, as_json: bool) -> None:
 
 
 @main.command()
+@click.argument("netlist", type=click.Path(path_type=Path))
+@click.option(
+    "-o", "--out", type=click.Path(path_type=Path), required=True, help="Sheet to write; a new file."
+)
+@click.option("--subckt", metavar="S", help="Which subckt, if the netlist has several.")
+@click.option("--models", multiple=True, metavar="FILE[:SECTION]", help="Model file; may be repeated.")
+@click.option("--supply", metavar="V", help='Supply of the corner, such as "1.8 V".')
+@click.option("--temperature", metavar="C", default="25 C", show_default=True)
+@click.option("--compatibility", metavar="KIND", help="ngspice's ngbehavior, where the models need it.")
+@click.option(
+    "--option", "options", multiple=True, metavar="NAME=VALUE", help="SPICE option; may be repeated."
+)
+@click.option(
+    "--include-folder",
+    "folders",
+    multiple=True,
+    type=click.Path(path_type=Path),
+    metavar="DIR",
+    help="Folder that files may be included from; may be repeated.",
+)
+def draft(
+    netlist: Path,
+    out: Path,
+    subckt: str | None,
+    models: tuple[str, ...],
+    supply: str | None,
+    temperature: str,
+    compatibility: str | None,
+    options: tuple[str, ...],
+    folders: tuple[Path, ...],
+) -> None:
+    """Work out the pins and the function of a cell from its NETLIST, and write a first sheet.
+
+    With models the function is proved by simulation and the axes are measured; without, the sheet says so.
+
+    Example: charflow draft my_cell.spice --models my.lib:tt --supply "1.2 V" -o my_cell.toml
+    """
+    from charflow.probe.draft import Wanted, draft_to, option_values
+
+    wanted = Wanted(
+        subckt, models, supply, temperature, compatibility, option_values(options), tuple(folders)
+    )
+    marked = draft_to(netlist, out, wanted, lambda text: click.echo(f"charflow: {text}", err=True))
+    click.echo(f"Written to {out}; read it before you trust it.")
+    if marked:
+        click.echo(f"Lines marked NOT SURE or FILL IN: {marked}.")
+
+
+@main.command()
 @click.argument("folder", metavar="DIR", type=click.Path(path_type=Path))
 @click.option(
     "--format",

@@ -11,6 +11,7 @@ from collections.abc import Callable, Iterator
 from contextlib import ExitStack
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -133,37 +134,48 @@ def corner() -> Callable[..., str]:
     return _corner
 
 
-@pytest.fixture
-def make_sheet(tmp_path: Path, tarn: Path) -> MakeSheet:
+def write_sheet(
+    path: Path,
+    *,
+    cell: str = "tarn_dffp_1",
+    decks: Path | None = None,
+    active: str = "rise",
+    corners: str | None = None,
+    clock_slew: str = '["50 ps"]',
+    data_slew: str = '["50 ps"]',
+    load: str = '["5 fF"]',
+    pushout: str = "10 %",
+    edit: tuple[str, str] = ("", ""),
+) -> Path:
     """Write a sheet of a Tarn flip-flop with one point a table; keywords change it."""
+    decks = decks or decks_folder()
+    text = TINY.format(
+        cell=cell,
+        decks=decks,
+        active=active,
+        corners=corners or _corner(f"{decks}/tarn130.lib:tt"),
+        clock_slew=clock_slew,
+        data_slew=data_slew,
+        load=load,
+        pushout=pushout,
+    )
+    assert edit[0] in text
+    path.write_text(text.replace(*edit), encoding="utf-8")
+    return path
 
-    def make(
-        name: str = "tiny.toml",
-        *,
-        cell: str = "tarn_dffp_1",
-        decks: Path = tarn,
-        active: str = "rise",
-        corners: str | None = None,
-        clock_slew: str = '["50 ps"]',
-        data_slew: str = '["50 ps"]',
-        load: str = '["5 fF"]',
-        pushout: str = "10 %",
-        edit: tuple[str, str] = ("", ""),
-    ) -> Path:
-        text = TINY.format(
-            cell=cell,
-            decks=decks,
-            active=active,
-            corners=corners or _corner(f"{decks}/tarn130.lib:tt"),
-            clock_slew=clock_slew,
-            data_slew=data_slew,
-            load=load,
-            pushout=pushout,
-        )
-        assert edit[0] in text
-        path = tmp_path / name
-        path.write_text(text.replace(*edit), encoding="utf-8")
-        return path
+
+@pytest.fixture(scope="session")
+def make_sheet_at() -> MakeSheet:
+    """Write a sheet of a Tarn flip-flop to a path; keywords change it."""
+    return write_sheet
+
+
+@pytest.fixture
+def make_sheet(tmp_path: Path) -> MakeSheet:
+    """Write a sheet of a Tarn flip-flop into the test's own folder; keywords change it."""
+
+    def make(name: str = "tiny.toml", **changes: Any) -> Path:
+        return write_sheet(tmp_path / name, **changes)
 
     return make
 

@@ -43,21 +43,25 @@ def open_folder(folder: Path) -> Path:
 def held(folder: Path) -> Iterator[None]:
     """Hold ``folder`` for this process. Raises :class:`FolderError` naming the process that has it."""
     try:
-        file = (folder / LOCK).open("r+")
+        file = (folder / LOCK).open("rb+", buffering=0)
     except OSError as error:
         raise FolderError(f"the folder cannot be written: {error.strerror}", where=(str(folder),)) from None
     with file:
         try:
             fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
         except OSError:
-            holder = file.read().strip() or "unknown"
+            holder = file.read().decode("ascii", "replace").strip() or "unknown"
             raise FolderError(
                 f"another run (process {holder}) is working in this folder",
                 where=(str(folder),),
                 todo="Wait for it, stop it, or name another folder.",
             ) from None
-        file.seek(0)
-        file.truncate()
-        file.write(f"{os.getpid()}\n")
-        file.flush()
+        try:
+            file.seek(0)
+            file.truncate()
+            file.write(f"{os.getpid()}\n".encode())
+        except OSError as error:
+            raise FolderError(
+                f"the folder cannot be written: {error.strerror}", where=(str(folder),)
+            ) from None
         yield

@@ -31,14 +31,12 @@ class Node:
 
 def nodes_of(sheet: Sheet, corners: tuple[str, ...]) -> list[Node]:
     """Return the jobs of a run: one preparation a corner, then its rows, teachers before pupils."""
-    slews = sheet.axes.clock_slew
     nodes = []
     for corner in corners:
         prepare = f"{corner}: preparing"
         nodes.append(Node(prepare, corner, None, 0.0, (), 0))
         for number, group in enumerate(groups_of(sheet)):
-            points = len(group.delays) * len(sheet.axes.load) * 2
-            points += len(group.constraints) * len(sheet.axes.data_slew)
+            slews, points = group.slews(sheet.axes), group.points(sheet.axes)
             for index, near in ends_then_middles(len(slews), last_first=True):
                 teachers = [row_label(corner, number, slews[i]) for i in near]
                 teachers += [
@@ -51,4 +49,4 @@ def nodes_of(sheet: Sheet, corners: tuple[str, ...]) -> list[Node]:
 
 def row_label(corner: str, group: int, clock_slew: float) -> str:
     """Return what people call a row."""
-    return f"{corner}: group {group + 1}, clock slew {clock_slew * 1e12:g} ps"
+    return f"{corner}: group {group + 1}, slew {clock_slew * 1e12:g} ps"

@@ -11,7 +11,7 @@ import os
 import shutil
 from collections.abc import Iterator
 from pathlib import Path
-from typing import Any, TextIO
+from typing import Any
 
 from charflow.campaign.codec import seal
 from charflow.errors import FolderError
@@ -24,20 +24,25 @@ class Journal:
 
     def __init__(self, folder: Path) -> None:
         self._path = folder / f"{os.getpid()}{SUFFIX}"
-        self._file: TextIO = self._path.open("a", encoding="utf-8")
+        self._file = self._path.open("ab", buffering=0)
 
     def write(self, **event: Any) -> None:
         """Append one event and hand it to the operating system. Raises :class:`FolderError`."""
         text = json.dumps(event, separators=(",", ":"))
+        left = f"{seal(text)} {text}\n".encode()
         try:
-            self._file.write(f"{seal(text)} {text}\n")
-            self._file.flush()
+            while left:
+                left = left[self._file.write(left) :]
         except OSError as error:
             raise FolderError(
                 f"the run folder cannot be written: {error.strerror}",
                 where=(str(self._path),),
                 todo="Free some space, or check the permissions; then run the same command again to go on.",
             ) from None
+
+    def close(self) -> None:
+        """Close the file; it stays."""
+        self._file.close()
 
 
 class Follower:

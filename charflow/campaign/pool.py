@@ -13,6 +13,7 @@ import threading
 from collections.abc import Callable
 from concurrent.futures import Future
 from contextlib import suppress
+from multiprocessing import resource_tracker
 from multiprocessing.connection import Connection
 from multiprocessing.context import SpawnProcess
 from pathlib import Path
@@ -66,6 +67,7 @@ class LocalPool:
 
     def __enter__(self) -> Self:
         """Open the pool."""
+        resource_tracker.ensure_running()  # it would unblock the signals that _serve blocks
         for thread in self._threads:
             thread.start()
         return self

@@ -145,7 +145,7 @@ def _result(campaign: Campaign, interrupted: bool) -> RunResult:
             order[answer.corner],
             kinds[answer.quantity],
             *arc,
-            answer.clock_slew,
+            answer.clock_slew or 0.0,
             answer.data_slew or 0.0,
             answer.load,
         )

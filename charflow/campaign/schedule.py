@@ -20,7 +20,7 @@ from charflow.probe.rest import Rest
 from charflow.sheet import Sheet
 from charflow.simulate.session import Clock
 from charflow.solve.accuracy import Accuracy
-from charflow.solve.row import RowResult, lost_row
+from charflow.solve.row import Group, RowResult, lost_row
 
 TRIAL_LIMIT = 120.0  # s without a sign of life from a worker at work on a trial
 
@@ -156,18 +156,20 @@ def _key(campaign: Campaign, node: Node) -> str:
     return key
 
 
-def _trial_label(campaign: Campaign, node: Node) -> str:
-    """Return the label trials are kept under: what stays the same when axes or pushout change."""
-    facts = (
-        campaign.circuits[node.corner].digest,
-        repr(node.group and node.group.start),
-        repr(node.clock_slew),
-    )
+def _trial_label(campaign: Campaign, corner: str, group: Group | None = None, clock_slew: float = 0.0) -> str:
+    """Return the label trials are kept under: what stays the same when axes or pushout change.
+
+    Without a group, it is that of the trials which prepare a corner.
+    """
+    facts = (campaign.circuits[corner].digest, repr(group and group.start), repr(clock_slew))
     return hashlib.sha256("\n".join(facts).encode()).hexdigest()[:24]
 
 
 def _job(campaign: Campaign, node: Node) -> Job:
-    label = _trial_label(campaign, node)
+    label = _trial_label(campaign, node.corner, node.group, node.clock_slew)
+    known = campaign.store.outcomes(label)
+    if node.group is not None:  # rows repeat some trials of the preparation
+        known |= campaign.store.outcomes(_trial_label(campaign, node.corner))
     known_rows = [campaign.rows[name] for name in node.after if name in campaign.rows]
     if node.corner in campaign.accuracy and node.clock_slew == campaign.sheet.axes.clock_slew[-1]:
         known_rows.append(campaign.accuracy[node.corner].taught)  # found while settings were chosen
@@ -180,7 +182,7 @@ def _job(campaign: Campaign, node: Node) -> Job:
         group=node.group,
         clock_slew=node.clock_slew,
         neighbours=tuple(known_rows),
-        known=campaign.store.outcomes(label),
+        known=known,
         poisoned=frozenset(key for key, count in campaign.deaths.items() if count > 1),
     )
 

@@ -113,7 +113,8 @@ class Bench:
             raise WorkerDied("the simulator died or hung twice on this trial")
         _say(begin=key)
         outcome = _engine(self.circuit, self.settings).run(trial)
-        _say(key=key, label=self.job.label, trial=trial_to(trial), outcome=outcome_to(outcome))
+        self.job.known[key] = outcome_to(outcome)
+        _say(key=key, label=self.job.label, trial=trial_to(trial), outcome=self.job.known[key])
         return outcome
 
 

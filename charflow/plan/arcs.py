@@ -1,24 +1,37 @@
-"""The timing questions of a cell, derived from its function; none is listed by hand."""
+"""The timing questions that can be asked of a register, and what each observes.
+
+:mod:`charflow.plan.derive` finds which of them a cell has.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from dataclasses import dataclass
 from enum import StrEnum
 
-from charflow.errors import SheetError
-from charflow.plan.behaviour import Behaviour, Bits, behaviour_of
 from charflow.plan.trial import Start
-from charflow.sheet import Sheet
 
 
 class Kind(StrEnum):
     """What an arc asks for; the values are the names used in ``tables.csv``."""
 
     CLK_TO_Q = "clk_to_q"
+    GATE_TO_Q = "gate_to_q"
+    DATA_TO_Q = "data_to_q"
+    ASYNC_TO_Q = "async_to_q"
     TRANSITION = "transition"
     SETUP = "setup"
     HOLD = "hold"
+    RECOVERY = "recovery"
+    REMOVAL = "removal"
+    PULSE_WIDTH = "pulse_width"
+    MIN_PERIOD = "min_period"
+
+
+DELAYS = frozenset({Kind.CLK_TO_Q, Kind.GATE_TO_Q, Kind.DATA_TO_Q, Kind.ASYNC_TO_Q})
+BEFORE = frozenset({Kind.SETUP, Kind.RECOVERY})  # the edge must come before the related one
+AFTER = frozenset({Kind.HOLD, Kind.REMOVAL})  # the edge must come after it
+WIDTHS = frozenset({Kind.PULSE_WIDTH, Kind.MIN_PERIOD})  # a width of the pin's own waveform
+PARTNER = {Kind.HOLD: Kind.SETUP, Kind.REMOVAL: Kind.RECOVERY}
 
 
 def edge_name(rising: bool) -> str:
@@ -30,10 +43,15 @@ def edge_name(rising: bool) -> str:
 class Arc:
     """One timing question.
 
-    ``pin`` and ``rising`` are what moves (the data pin of a constraint, the clock of a delay),
-    ``related`` and ``related_rising`` the reference edge, ``observed`` the outputs that must move and
-    where to. ``start`` is the rest the trial begins from, ``relaxed`` the rest with the right data there
-    for long, ``when`` the levels of side inputs.
+    ``pin`` and ``rising`` are what moves (the data pin of a constraint, the input of a delay, the first
+    edge of a pulse), ``related`` and ``related_rising`` the reference edge. ``observed`` are the outputs
+    that must switch, and where to; ``quiet`` those that must stay, and at which level. Delays count from
+    the related edge, or with ``since_pin`` from the pin's own edge (a latch that is open). With
+    ``pulsed`` each observed output must make a whole pulse and come back.
+
+    ``start`` is the rest the trial begins from, ``relaxed`` the rest with the right data there for long,
+    ``contrary`` the rest with the wrong data (it tells how fast an output that must stay would move).
+    ``when`` are the levels of side inputs, ``neighbours`` tells of the other bits of a multi-bit register.
     """
 
     kind: Kind
@@ -45,95 +63,36 @@ class Arc:
     start: Start
     relaxed: Start
     when: tuple[tuple[str, bool], ...] = ()
+    quiet: tuple[tuple[str, bool], ...] = ()
+    contrary: Start | None = None
+    since_pin: bool = False
+    pulsed: bool = False
+    neighbours: str = ""
+    data: tuple[str, bool] | None = None  # of a minimum period: the data pin and what is captured last
+
+    @property
+    def side(self) -> str:
+        """The side condition as a logic expression, with what the neighbours do."""
+        text = " & ".join(pin if level else f"!{pin}" for pin, level in self.when)
+        return f"{text}; {self.neighbours}" if text and self.neighbours else text or self.neighbours
 
     @property
     def words(self) -> str:
         """Return the question in words a person can check."""
-        outputs = ", ".join(f"{pin} {'rises' if up else 'falls'}" for pin, up in self.observed)
-        side = "".join(f", {pin}={int(level)}" for pin, level in self.when)
+        moves = [
+            f"{pin} {'pulses' if self.pulsed else 'rises' if up else 'falls'}" for pin, up in self.observed
+        ]
+        stays = [f"{pin} stays {int(level)}" for pin, level in self.quiet]
+        outputs = ", ".join(moves + stays)
+        side = f", when {self.side}" if self.side else ""
         edge = f"{self.related} {edge_name(self.related_rising)}"
-        data = f"{self.pin} {edge_name(self.rising)}"
-        match self.kind:
-            case Kind.SETUP:
-                return f"setup: {data} this long before {edge}; {outputs}{side}"
-            case Kind.HOLD:
-                return f"hold: {data} this long after {edge}; {outputs}{side}"
-            case _:
-                return f"delay and transition: {edge} until {outputs}{side}"
-
-
-def arcs_of(sheet: Sheet) -> tuple[Arc, ...]:
-    """Return every arc of the cell: delays first, then setup and hold of each data pin and edge.
-
-    Raises :class:`SheetError` where the sheet's function leaves nothing to measure.
-    """
-    cell = behaviour_of(sheet)
-    if cell.transparent or cell.clears or cell.presets:
-        pin = cell.control if cell.transparent else (*cell.clears, *cell.presets)[0][0]
-        raise SheetError(
-            f"pins.{pin}: the role {sheet.pins[pin].role.value!r} is known but not measured by this version",
-            where=(str(sheet.path),),
-        )
-    arcs = (*_delays(cell), *_constraints(cell))
-    if not arcs:
-        raise SheetError(
-            "no clock edge can move any output, so there is nothing to measure", where=(str(sheet.path),)
-        )
-    return arcs
-
-
-def _moved(cell: Behaviour, old: Bits, new: Bits, values: dict[str, bool]) -> tuple[tuple[str, bool], ...]:
-    before, after = cell.shown(old, values), cell.shown(new, values)
-    return tuple((pin, bool(after[pin])) for pin in after if after[pin] != before[pin])
-
-
-def _resting(cell: Behaviour) -> Iterator[dict[str, bool]]:
-    """Yield the input vectors with the clock at its inactive level and no asynchronous input acting."""
-    for vector in cell.vectors():
-        if vector[cell.control] is not cell.active_high and not any(cell.asynchronous(vector)):
-            yield vector
-
-
-def _delays(cell: Behaviour) -> Iterator[Arc]:
-    """Yield one arc for each output and direction, under the first side condition that makes it move."""
-    seen = set()
-    for vector in reversed(list(_resting(cell))):
-        for old in cell.states():
-            new = cell.captured(old, vector)
-            start = cell.reach(old, vector)
-            if None in new or start is None:
-                continue
-            for output in _moved(cell, old, new, vector):
-                if output not in seen:
-                    seen.add(output)
-                    edge = (cell.control, cell.active_high)
-                    yield Arc(Kind.CLK_TO_Q, *edge, *edge, (output,), start, start)
-
-
-def _constraints(cell: Behaviour) -> Iterator[Arc]:
-    for kind in (Kind.SETUP, Kind.HOLD):
-        for pin in cell.data_pins:
-            for rising in (True, False):
-                yield from _constraint(cell, kind, pin, rising)
-
-
-def _constraint(cell: Behaviour, kind: Kind, pin: str, rising: bool) -> Iterator[Arc]:
-    """Yield one arc for each side condition in which ``pin`` decides what is captured."""
-    for vector in _resting(cell):
-        if vector[pin] is not rising:
-            continue
-        before, after = {**vector, pin: not rising}, vector
-        right = after if kind is Kind.SETUP else before  # the data that must be captured
-        wrong = before if kind is Kind.SETUP else after
-        for old in cell.states():
-            new = cell.captured(old, right)
-            if None in new or new == old or cell.captured(old, wrong) != old:
-                continue
-            start, relaxed = cell.reach(old, before), cell.reach(old, right)
-            if start is None or relaxed is None:
-                continue
-            when = tuple((p, vector[p]) for p in cell.data_pins if p != pin)
-            observed = _moved(cell, old, new, right)
-            if observed:
-                edge = (cell.control, cell.active_high)
-                yield Arc(kind, pin, rising, *edge, observed, start, relaxed, when)
+        mover = f"{self.pin} {edge_name(self.rising)}"
+        if self.kind in DELAYS:
+            return f"delay and transition: {mover} until {outputs}{side}"
+        if self.kind in BEFORE:
+            return f"{self.kind.value}: {mover} this long before {edge}; {outputs}{side}"
+        if self.kind in AFTER:
+            return f"{self.kind.value}: {mover} this long after {edge}; {outputs}{side}"
+        if self.kind is Kind.MIN_PERIOD:
+            return f"minimum period of {self.pin}, {self.data and self.data[0]} toggling; {outputs}{side}"
+        return f"minimum {'high' if self.rising else 'low'} pulse of {self.pin}; {outputs}{side}"

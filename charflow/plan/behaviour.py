@@ -45,6 +45,16 @@ class Behaviour:
         return tuple(pin for pin in self.inputs if pin in read)
 
     @property
+    def asynchronous_pins(self) -> tuple[str, ...]:
+        """Clears and presets."""
+        return tuple(pin for pin, _ in (*self.clears, *self.presets))
+
+    @property
+    def waits_at(self) -> bool:
+        """The level of the control pin before the edge that captures: a clock inactive, a gate open."""
+        return self.active_high if self.transparent else not self.active_high
+
+    @property
     def unknown(self) -> Bits:
         """The state before anything is known."""
         return (None,) * len(self.next_state)

@@ -8,9 +8,10 @@ from pathlib import Path
 from typing import Any
 
 from charflow.errors import FolderError, SheetError
-from charflow.plan.arcs import Arc, Kind, arcs_of, edge_name
+from charflow.plan.arcs import DELAYS, WIDTHS, Arc, Kind, edge_name
 from charflow.plan.circuit import Circuit, circuit_of, read_sources
 from charflow.plan.deck import Settings, deck
+from charflow.plan.derive import arcs_of
 from charflow.plan.stimulus import Condition, at_offset, ramp_time, relaxed
 from charflow.plan.trial import Trial
 from charflow.sheet import Sheet
@@ -60,10 +61,12 @@ def write_decks(sheet: Sheet, folder: Path) -> dict[str, Any]:
 
 def _trials(sheet: Sheet, circuit: Circuit) -> Iterator[tuple[str, Trial]]:
     for arc in arcs_of(sheet):
-        if arc.kind is Kind.CLK_TO_Q:
-            for slew in sheet.axes.clock_slew:
+        if arc.kind in DELAYS:
+            by_data = arc.kind is Kind.DATA_TO_Q
+            for slew in sheet.axes.data_slew if by_data else sheet.axes.clock_slew:
                 for load in sheet.axes.load:
-                    condition = Condition(circuit.corner, slew, None, load)
+                    clock, data = (None, slew) if by_data else (slew, None)
+                    condition = Condition(circuit.corner, clock, data, load)
                     end = ramp_time(slew, circuit.fractions) / 2 + AFTER
                     yield _name(arc, condition, None), relaxed(sheet, arc, condition, end)
         else:
@@ -75,19 +78,22 @@ def _sweep(sheet: Sheet, circuit: Circuit, arc: Arc) -> Iterator[tuple[str, Tria
         for data_slew in sheet.axes.data_slew:
             condition = Condition(circuit.corner, clock_slew, data_slew, sheet.axes.constraint_load)
             ramp = ramp_time(max(clock_slew, data_slew), circuit.fractions)
-            for part in OFFSETS:
+            for part in (p for p in OFFSETS if p > 1 or arc.kind not in WIDTHS):
                 offset = part * ramp
                 end = abs(offset) + ramp + AFTER
                 yield _name(arc, condition, offset), at_offset(sheet, arc, condition, offset, end)
 
 
 def _name(arc: Arc, condition: Condition, offset: float | None) -> str:
-    output, rising = arc.observed[0]
-    parts = [condition.corner, arc.kind.value]
-    parts += [arc.pin, edge_name(arc.rising)] if offset is not None else [output, edge_name(rising)]
+    parts = [condition.corner, arc.kind.value, arc.pin, edge_name(arc.rising)]
+    parts += [f"{pin}_{edge_name(rising)}" for pin, rising in arc.observed if arc.kind in DELAYS | WIDTHS]
     parts += [f"{pin}{int(level)}" for pin, level in arc.when]
-    parts.append(f"clock{condition.clock_slew * 1e12:g}ps")
-    if condition.data_slew is not None and offset is not None:
-        parts += [f"data{condition.data_slew * 1e12:g}ps", f"offset{offset * 1e12:+.0f}ps"]
+    parts += ["neighbours_switch"] if arc.neighbours else []
+    if condition.clock_slew is not None:
+        parts.append(f"clock{condition.clock_slew * 1e12:g}ps")
+    if condition.data_slew is not None:
+        parts.append(f"data{condition.data_slew * 1e12:g}ps")
+    if offset is not None:
+        parts.append(f"offset{offset * 1e12:+.0f}ps")
     parts.append(f"{condition.load * 1e15:g}fF")
     return re.sub(r"[^\w.+-]", "_", "_".join(parts))

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
-from charflow.plan.arcs import Kind, arcs_of
+from charflow.plan.arcs import DELAYS, WIDTHS, Kind
+from charflow.plan.derive import arcs_of
 from charflow.plan.circuit import read_sources
 from charflow.sheet import Sheet
 from charflow.sheet.netlist import find_subckt, read_subckts
@@ -12,7 +13,7 @@ from charflow.sheet.netlist import find_subckt, read_subckts
 # A warm trial of a 24 to 32 transistor flip-flop takes 10 to 25 ms on one 2.5 GHz class core: about half
 # a millisecond a transistor. A constraint takes five trials on average, a delay one.
 SECONDS_A_TRANSISTOR = 0.5e-3
-TRIALS = {Kind.CLK_TO_Q: 1.0, Kind.SETUP: 5.0, Kind.HOLD: 5.0}
+TRIALS_A_DELAY, TRIALS_A_CONSTRAINT, TRIALS_A_WIDTH = 1.0, 4.5, 9.0
 TRIALS_A_CORNER = 60.0  # proving the function and the rest
 
 
@@ -26,10 +27,16 @@ def outline(sheet: Sheet) -> dict[str, Any]:
     listed: list[dict[str, Any]] = []
     trials = TRIALS_A_CORNER
     for arc in arcs:
-        columns = len(axes.load) if arc.kind is Kind.CLK_TO_Q else len(axes.data_slew)
-        points = len(axes.clock_slew) * columns
-        trials += points * TRIALS[arc.kind]
-        listed.append({"arc": arc.words, "points": points * (2 if arc.kind is Kind.CLK_TO_Q else 1)})
+        loads = len(axes.loads_of_constraints)
+        if arc.kind in DELAYS:
+            rows = axes.data_slew if arc.kind is Kind.DATA_TO_Q else axes.clock_slew
+            points, each = len(rows) * len(axes.load), TRIALS_A_DELAY
+        elif arc.kind in WIDTHS:
+            points, each = len(axes.clock_slew) * loads, TRIALS_A_WIDTH
+        else:
+            points, each = len(axes.clock_slew) * len(axes.data_slew) * loads, TRIALS_A_CONSTRAINT
+        trials += points * each
+        listed.append({"arc": arc.words, "points": points * (2 if arc.kind in DELAYS else 1)})
     trials *= len(sheet.corners)
     return {
         "cell": subckt.name,

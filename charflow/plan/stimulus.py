@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from charflow.plan.arcs import Arc, Kind
+from charflow.plan.arcs import BEFORE, Arc, Kind
 from charflow.plan.trial import Move, Trial
 from charflow.sheet import Sheet
 
@@ -13,35 +13,84 @@ LEAD = 10e-12  # s of rest before the first ramp; the cell is settled, so this o
 
 @dataclass(frozen=True)
 class Condition:
-    """Where in the tables a value stands: corner, slews [s] and the load [F] of the observed outputs."""
+    """Where in the tables a value stands: corner, slews [s] and the load [F] of the observed outputs.
+
+    ``clock_slew`` is that of the control and asynchronous pins, ``data_slew`` that of data pins and of
+    the edge a constraint is about; None where the arc has no such edge.
+    """
 
     corner: str
-    clock_slew: float
+    clock_slew: float | None
     data_slew: float | None
     load: float
 
 
 def relaxed(sheet: Sheet, arc: Arc, condition: Condition, until: float) -> Trial:
-    """Return the trial whose data is right long before the reference edge and long after it."""
-    clock = Move(arc.related, arc.related_rising, 0.0, condition.clock_slew)
-    return Trial(condition.corner, arc.relaxed, (clock,), _loads(sheet, arc, condition.load), until)
+    """Return the trial that shows the arc's outputs with everything right long before and long after."""
+    if arc.kind is Kind.DATA_TO_Q or arc.since_pin:
+        move = Move(arc.pin, arc.rising, 0.0, _given(condition.data_slew, sheet.axes.data_slew))
+        return Trial(condition.corner, arc.start, (move,), _loads(sheet, arc, condition.load), until)
+    move = Move(arc.related, arc.related_rising, 0.0, _given(condition.clock_slew, sheet.axes.clock_slew))
+    return Trial(condition.corner, arc.relaxed, (move,), _loads(sheet, arc, condition.load), until)
+
+
+def contrary(sheet: Sheet, arc: Arc, condition: Condition, until: float) -> tuple[Trial, ...]:
+    """Return trials in which outputs that must stay do move: how fast they are sets the time scale."""
+    loads = _loads(sheet, arc, condition.load)
+    clock = Move(arc.related, arc.related_rising, 0.0, _given(condition.clock_slew, sheet.axes.clock_slew))
+    data = Move(arc.pin, arc.rising, 0.0, _given(condition.data_slew, sheet.axes.data_slew))
+    wrong = arc.contrary or arc.relaxed
+    return (
+        Trial(condition.corner, wrong, (clock,), loads, until),
+        Trial(condition.corner, arc.start, (data,), loads, until),
+    )
 
 
 def at_offset(sheet: Sheet, arc: Arc, condition: Condition, offset: float, until: float) -> Trial:
-    """Return the trial of a setup or hold arc with the data edge ``offset`` [s] to the safe side.
+    """Return the trial of a constraint arc at ``offset`` [s]; larger is safer.
 
-    Setup: the data edge comes ``offset`` before the reference edge. Hold: ``offset`` after it.
+    Setup, recovery: the pin's edge comes ``offset`` before the reference edge. Hold, removal: ``offset``
+    after it. Pulse width: the pulse is ``offset`` wide between its 50 % points. Minimum period: the
+    clock's edges repeat after ``offset``, the data changing half-way between two of them.
     """
-    if condition.data_slew is None:
-        raise ValueError("a constraint needs a data slew")
-    at = -offset if arc.kind is Kind.SETUP else offset
-    clock = Move(arc.related, arc.related_rising, 0.0, condition.clock_slew)
-    data = Move(arc.pin, arc.rising, at, condition.data_slew)
-    return Trial(condition.corner, arc.start, (clock, data), _loads(sheet, arc, condition.load), until)
+    moves = _moves(sheet, arc, condition, offset)
+    return Trial(condition.corner, arc.start, moves, _loads(sheet, arc, condition.load), until)
+
+
+def _moves(sheet: Sheet, arc: Arc, condition: Condition, offset: float) -> tuple[Move, ...]:
+    clock_slew = _given(condition.clock_slew, sheet.axes.clock_slew)
+    data_slew = _given(condition.data_slew, sheet.axes.data_slew)
+    reference = Move(arc.related, arc.related_rising, 0.0, clock_slew)
+    if arc.kind is Kind.PULSE_WIDTH:
+        other = offset if arc.rising is arc.related_rising else -offset
+        return tuple(sorted((reference, Move(arc.pin, not arc.related_rising, other, clock_slew)), key=_when))
+    if arc.kind is Kind.MIN_PERIOD:
+        assert arc.data is not None
+        pin, level = arc.data
+        return (
+            Move(arc.pin, arc.rising, -offset, clock_slew),
+            Move(pin, level, -offset / 2, data_slew),
+            Move(arc.pin, not arc.rising, -offset / 2, clock_slew),
+            reference,
+        )
+    return (reference, Move(arc.pin, arc.rising, pin_time(arc, offset), data_slew))
+
+
+def _when(move: Move) -> float:
+    return move.at
+
+
+def pin_time(arc: Arc, offset: float) -> float:
+    """Return when [s] the pin's edge comes, relative to the reference edge, at a constraint's ``offset``."""
+    return -offset if arc.kind in BEFORE else offset
+
+
+def _given(slew: float | None, axis: tuple[float, ...]) -> float:
+    return axis[0] if slew is None else slew
 
 
 def _loads(sheet: Sheet, arc: Arc, load: float) -> tuple[tuple[str, float], ...]:
-    watched = {pin for pin, _ in arc.observed}
+    watched = {pin for pin, _ in (*arc.observed, *arc.quiet)}
     return tuple((pin, load if pin in watched else sheet.axes.load[0]) for pin in sheet.outputs)
 
 

@@ -15,7 +15,7 @@ from charflow.probe.transistors import Network
 
 MAX_INPUTS = 10
 MAX_PLACES = 30_000
-SECONDS = 120.0  # of exploring
+SECONDS = 60.0  # of exploring
 MAX_SEARCH = 20_000  # settlings spent on finding a first known state
 
 Vector = tuple[int, ...]
@@ -91,7 +91,7 @@ class _Walk:
     def shown(self, state: State) -> Vector:
         return tuple([state[node] for node in self.outputs])
 
-    def flipped(self, state: State, pin: int, *, paced: bool = True) -> tuple[State, frozenset[int]]:
+    def flipped(self, state: State, pin: int, *, paced: bool = True) -> State:
         node = self.switches.inputs[pin]
         return self.switches.settle(state, {node: HIGH if state[node] == LOW else LOW}, paced=paced)
 
@@ -106,8 +106,8 @@ class _Walk:
             state = states[len(following)]
             ways = []
             for pin in range(len(self.ports.inputs)):
-                after, floating = self.flipped(state, pin)
-                raced += self.key(self.flipped(state, pin, paced=False)[0]) != self.key(after)
+                after = self.flipped(state, pin)
+                raced += self.key(self.flipped(state, pin, paced=False)) != self.key(after)
                 if UNKNOWN in self.shown(after):
                     ways.append(-1)
                     continue
@@ -115,7 +115,7 @@ class _Walk:
                 if key not in numbers:
                     numbers[key] = len(states)
                     states.append(after)
-                    self._note_charge(after, floating, charged)
+                    self._note_charge(after, charged)
                 ways.append(numbers[key])
             following.append(tuple(ways))
             self._check_effort(len(states))
@@ -134,7 +134,7 @@ class _Walk:
 
     def _first_known(self) -> State:
         """Return the first state found, from power-up, with known outputs and the fewest unknown gates."""
-        begin, _ = self.switches.settle(self.switches.blank([LOW] * len(self.ports.inputs)))
+        begin = self.switches.settle(self.switches.blank([LOW] * len(self.ports.inputs)))
         queue, seen = deque([begin]), {self.key(begin)}
         best: tuple[int, State] | None = None
         tried = 0
@@ -146,7 +146,7 @@ class _Walk:
                 if not unknown:
                     return state
             for pin in range(len(self.ports.inputs)):
-                after, _ = self.flipped(state, pin)
+                after = self.flipped(state, pin)
                 tried += 1
                 if self.key(after) not in seen:
                     seen.add(self.key(after))
@@ -159,13 +159,13 @@ class _Walk:
             )
         return best[1]
 
-    def _note_charge(self, state: State, floating: frozenset[int], charged: dict[str, Vector]) -> None:
+    def _note_charge(self, state: State, charged: dict[str, Vector]) -> None:
         """Record floating gate nodes whose loss of charge would show at an output."""
-        for node in floating.intersection(self.switches.controls):
+        for node in self.switches.floating(state).intersection(self.switches.controls):
             name = self.switches.names[node]
             if name in charged or state[node] == UNKNOWN:
                 continue
             lost = HIGH if state[node] == LOW else LOW
-            after, _ = self.switches.settle(state, {node: lost})
+            after = self.switches.settle(state, {node: lost})
             if self.shown(after) != self.shown(state):
                 charged[name] = tuple(state[n] for n in self.switches.inputs)

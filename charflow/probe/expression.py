@@ -13,7 +13,7 @@ from functools import lru_cache
 from itertools import product
 
 Table = tuple[bool, ...]  # index: the variables' levels as a binary number, the first variable highest
-MAX_PRODUCTS = 6  # variables up to which a sum of products is searched
+MAX_PRODUCTS = 9  # variables up to which a sum of products is searched
 
 
 def table_of(rows: Mapping[tuple[int, ...], bool], count: int) -> Table:
@@ -43,7 +43,8 @@ _Found = tuple[tuple[int, int], str, int]  # cost (names read, operators), text,
 _CHOICE, _OR, _XOR, _AND, _ATOM = range(5)
 
 
-def _cofactor(table: Table, variable: int, count: int, level: int) -> Table:
+def cofactor(table: Table, variable: int, count: int, level: int) -> Table:
+    """Return ``table`` with one of its ``count`` variables held at ``level``."""
     bit = 1 << (count - 1 - variable)
     return tuple(value for at, value in enumerate(table) if bool(at & bit) is bool(level))
 
@@ -58,7 +59,7 @@ def _shortest(table: Table, names: tuple[str, ...]) -> _Found:
     if len(set(table)) == 1:
         return (0, 0), str(int(table[0])), _ATOM
     for variable in range(count):
-        low, high = (_cofactor(table, variable, count, level) for level in (0, 1))
+        low, high = (cofactor(table, variable, count, level) for level in (0, 1))
         if low == high:
             return _shortest(low, names[:variable] + names[variable + 1 :])
     if count == 1:
@@ -66,14 +67,14 @@ def _shortest(table: Table, names: tuple[str, ...]) -> _Found:
     ways = [_taken_out(table, names, variable) for variable in range(count)]
     if count <= MAX_PRODUCTS:
         ways.append(_sum_of_products(table, names))
-    return min(ways, key=lambda way: (way[0], way[1]))
+    return min(ways, key=lambda way: way[0])
 
 
 def _taken_out(table: Table, names: tuple[str, ...], variable: int) -> _Found:
     """Return the expression that treats one variable first."""
     count, name = len(names), names[variable]
     rest = names[:variable] + names[variable + 1 :]
-    low, high = (_cofactor(table, variable, count, level) for level in (0, 1))
+    low, high = (cofactor(table, variable, count, level) for level in (0, 1))
     yes, no = _shortest(high, rest), _shortest(low, rest)
     if not any(low):
         return _pair(name, "&", yes, _AND, 0)

@@ -8,19 +8,19 @@ model of the sheet, walked along every flip of the map, never contradicts an out
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator
 from itertools import combinations, product
 
-from charflow.errors import NetlistError, SheetError
+from charflow.errors import NetlistError
 from charflow.plan.behaviour import Behaviour, Bits
 from charflow.probe.explore import Map, Vector
-from charflow.probe.reading import Async, Reading, Rows, stored_states
+from charflow.probe.reading import Async, Reading, stored_states
 from charflow.probe.truth import Function, function_of
 from charflow.sheet.logic import parse_logic
 
-__all__ = ["Function", "Rows", "infer"]
-
 MAX_ASYNCHRONOUS = 3
+_NAME = re.compile(r"[A-Za-z_][\w.$\[\]<>]*")
 
 
 def infer(reached: Map) -> Function:
@@ -29,6 +29,12 @@ def infer(reached: Map) -> Function:
     Where several readings stand, the one with the shortest expressions is returned and the control pins
     of the others are named in it. Raises :class:`NetlistError` where none stands.
     """
+    for pin in (*reached.inputs, *reached.outputs):
+        if not _NAME.fullmatch(pin):
+            raise NetlistError(
+                f"the port {pin!r} cannot be named in a logic expression",
+                todo="Rename it in the netlist: a letter first, then letters, digits and _ . $ [ ] < >.",
+            )
     standing: list[Function] = []
     for reading in _readings(reached):
         states = stored_states(reached, reading)
@@ -58,7 +64,7 @@ def _readings(reached: Map) -> Iterator[Reading]:
 
 
 def _asynchronous(reached: Map, control: int, movers: list[Async]) -> Iterator[tuple[Async, ...]]:
-    """Yield the sets of (pin, level) that could be clears and presets: acting alone, each fixes the outputs."""
+    """Yield the sets of (pin, level) that could clear and preset: acting alone, each fixes the outputs."""
     for size in range(min(MAX_ASYNCHRONOUS, len(movers)) + 1):
         for chosen in combinations(movers, size):
             if len({pin for pin, _ in chosen}) == size and _each_fixes(reached, control, chosen):
@@ -77,7 +83,7 @@ def _each_fixes(reached: Map, control: int, chosen: tuple[Async, ...]) -> bool:
 
 
 def behaviour(function: Function) -> Behaviour:
-    """Return the zero-delay model of ``function``. Raises :class:`SheetError` for pin names it cannot hold."""
+    """Return the zero-delay model of ``function``."""
     return Behaviour(
         control=function.control,
         active_high=function.active_high,
@@ -137,12 +143,3 @@ def _no_reading(reached: Map) -> NetlistError:
         f"clear and preset; its outputs can be moved by {', '.join(sorted(moving))}",
         todo="A sheet describes cells with one clock or gate only.",
     )
-
-
-def named(function: Function) -> SheetError | None:
-    """Return the error of the first pin name that an expression cannot hold, if there is one."""
-    try:
-        behaviour(function)
-    except SheetError as error:
-        return error
-    return None

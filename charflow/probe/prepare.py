@@ -6,9 +6,10 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 from charflow.errors import TrialError
-from charflow.plan.arcs import Arc, Kind, arcs_of
+from charflow.plan.arcs import Arc, Kind
 from charflow.plan.behaviour import behaviour_of
 from charflow.plan.circuit import Circuit
+from charflow.plan.derive import arcs_of
 from charflow.plan.stimulus import Condition, ramp_time, relaxed
 from charflow.plan.trial import Outcome, Trial
 from charflow.probe.function import check_function
@@ -41,7 +42,7 @@ def prepare(make: MakeEvaluate, sheet: Sheet, circuit: Circuit) -> Prepared:
         evaluate = make(circuit.rested(rest))
         return tuple(_delay(evaluate, sheet, arc, circuit.corner, rest) for arc in arcs)
 
-    arcs = [arc for arc in arcs_of(sheet) if arc.kind is Kind.CLK_TO_Q]
+    arcs = [arc for arc in arcs_of(sheet) if arc.kind in (Kind.CLK_TO_Q, Kind.GATE_TO_Q)]
     stated = sheet.measure.rest
     if stated is not None:
         rest = stated_rest(delays, stated, works(stated))

@@ -67,10 +67,8 @@ def stored_states(reached: Map, reading: Reading) -> Stored | None:
         for new in after:
             if follows.setdefault((block[state], vector), block[new]) != block[new]:
                 return None
-    at = tuple(
-        _label(reached, reading, number, {n: block[s] for n, s in joined.items()})
-        for number in range(len(reached.places))
-    )
+    known = {number: block[state] for number, state in joined.items()}
+    at = tuple(_label(reached, reading, number, known) for number in range(len(reached.places)))
     fixed = []
     for pin, _ in reading.forced:
         there = {

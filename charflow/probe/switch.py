@@ -41,11 +41,8 @@ class _Component:
     switches: tuple[_Switch, ...]
     gates: tuple[int, ...]
     edge: tuple[int, ...]
+    reads: tuple[int, ...]
     memo: dict[State, _Result]
-
-    @property
-    def reads(self) -> tuple[int, ...]:
-        return (*self.gates, *self.edge, *self.nodes)
 
 
 class Switches:
@@ -105,13 +102,9 @@ class Switches:
 
     def _component(self, switches: list[_Switch]) -> _Component:
         ends = {end for switch in switches for end in (switch.a, switch.b)}
-        return _Component(
-            nodes=tuple(sorted(ends - self._fixed)),
-            switches=tuple(switches),
-            gates=tuple(sorted({switch.gate for switch in switches})),
-            edge=tuple(sorted(ends & self._fixed)),
-            memo={},
-        )
+        nodes, edge = tuple(sorted(ends - self._fixed)), tuple(sorted(ends & self._fixed))
+        gates = tuple(sorted({switch.gate for switch in switches}))
+        return _Component(nodes, tuple(switches), gates, edge, (*gates, *edge, *nodes), {})
 
     def blank(self, levels: Sequence[int]) -> State:
         """Return the state in which only rails and inputs are known."""
@@ -120,30 +113,30 @@ class Switches:
             values[node] = level
         return tuple(values)
 
-    def settle(
-        self, state: State, changes: Mapping[int, int] | None = None, *, paced: bool = True
-    ) -> tuple[State, frozenset[int]]:
-        """Return the state the network comes to rest in, and its floating nodes, after ``changes``.
+    def settle(self, state: State, changes: Mapping[int, int] | None = None, *, paced: bool = True) -> State:
+        """Return the state the network comes to rest in after ``changes`` (node: level) to one at rest.
 
         Without ``changes`` every node is evaluated. A node follows after its resistance times its
         capacitance, or with ``paced`` false after one step, like every other. Nodes that never come to
         rest end unknown.
         """
         values = list(state)
+        waiting: set[int] = set() if changes else set(range(len(self._components)))
         for node, level in (changes or {}).items():
             values[node] = level
-        floating: dict[int, int] = {}
+            waiting.update(self._readers.get(node, ()))
+            if node in self._home:
+                waiting.add(self._home[node])
         events: list[tuple[float, int, int, int]] = []
         planned: dict[int, tuple[int, int]] = {}  # node: (serial, level) of the change to come
         stuck: set[int] = set()
         fired = 0
         serial = 0
         now = 0.0
-        waiting: Iterable[int] = range(len(self._components))
         while True:
             for number in waiting:
                 component = self._components[number]
-                new, floating[number], delays = self._evaluate(component, values)
+                new, _, delays = self._evaluate(component, values)
                 for node, level, delay in zip(component.nodes, new, delays, strict=True):
                     if level == values[node] or node in stuck:
                         planned.pop(node, None)
@@ -164,13 +157,15 @@ class Switches:
                 touched.update(self._readers.get(node, ()))
                 touched.add(self._home[node])
             waiting = touched
-        loose = {
-            node
-            for number, bits in floating.items()
-            for at, node in enumerate(self._components[number].nodes)
-            if bits >> at & 1
-        }
-        return tuple(values), frozenset(loose)
+        return tuple(values)
+
+    def floating(self, state: State) -> frozenset[int]:
+        """Return the nodes that no closed switch joins to a rail or a driven pin."""
+        loose: set[int] = set()
+        for component in self._components:
+            _, bits, _ = self._evaluate(component, list(state))
+            loose |= {node for at, node in enumerate(component.nodes) if bits >> at & 1}
+        return frozenset(loose)
 
     @staticmethod
     def _fire(

@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
-from itertools import combinations
+from itertools import combinations, count
 
 from charflow.plan.behaviour import STATE
 from charflow.probe.explore import Map, Vector
@@ -62,7 +62,7 @@ def function_of(reached: Map, reading: Reading, stored: Stored) -> Function | No
     codes = _codes(reached, stored)
     width = len(codes[0])
     taken = {pin.lower() for pin in (*reached.inputs, *reached.outputs)}
-    word = STATE if not any(pin.startswith(STATE) for pin in taken) else "stored"
+    word = next(w for w in _words() if not any(pin.startswith(w) for pin in taken))
     states = (word,) if width == 1 else tuple(f"{word}{bit}" for bit in range(width))
     forced = {pin for pin, _ in reading.forced}
     data = [pin for pin in range(len(reached.inputs)) if pin != reading.control and pin not in forced]
@@ -72,10 +72,12 @@ def function_of(reached: Map, reading: Reading, stored: Stored) -> Function | No
         return None
     names = (*(reached.inputs[pin] for pin in data), *states)
     written = [_written(rows, names) for rows in _next_rows(stored, data, codes)]
-    shown = [_written(rows, (*reached.inputs, *states)) for rows in _shown_rows(reached, stored, codes)]
+    shown = [_written(rows, (*states, *reached.inputs)) for rows in _shown_rows(reached, stored, codes)]
     if None in written or None in shown:
         return None
     bits = [found for found in written if found is not None]
+    if reading.gate and all(set(variables) <= set(states) for _, variables, _ in bits):
+        return None  # nothing to take in: a set and clear pair, not a latch
     return Function(
         control=reached.inputs[reading.control],
         active_high=bool(reading.active),
@@ -88,6 +90,12 @@ def function_of(reached: Map, reading: Reading, stored: Stored) -> Function | No
         tables=tuple((variables, rows) for _, variables, rows in bits),
         stored=stored.count,
     )
+
+
+def _words() -> Iterator[str]:
+    """Yield names for the state, until one is no pin's."""
+    yield from (STATE, "stored")
+    yield from (f"stored_{number}_" for number in count(2))
 
 
 def _codes(reached: Map, stored: Stored) -> list[Vector]:
@@ -116,15 +124,15 @@ def _upright(stored: Stored, data: list[int], codes: list[Vector]) -> list[Vecto
 
     Bits that read no pin follow the bits they read.
     """
-    width, settled = len(codes[0]), set()
+    width = len(codes[0])
+    settled: set[int] = set()
     for _ in range(2):
         for bit in range(width):
             if bit in settled:
                 continue
             rows = _next_rows(stored, data, codes)[bit]
-            count = len(data) + width
             watched = [*range(len(data)), *(len(data) + other for other in settled)]
-            score = sum(_direction(rows, variable) for variable in watched if variable < count)
+            score = sum(_direction(rows, variable) for variable in watched)
             if score:
                 settled.add(bit)
             if score < 0:
@@ -157,7 +165,7 @@ def _shown_rows(reached: Map, stored: Stored, codes: Sequence[Vector]) -> list[d
     for place, state in zip(reached.places, stored.at, strict=True):
         if state is None:
             continue
-        levels = (*place.vector, *codes[state])
+        levels = (*codes[state], *place.vector)
         for output, level in enumerate(place.outputs):
             table = rows[output]
             if table is not None and table.setdefault(levels, bool(level)) != bool(level):

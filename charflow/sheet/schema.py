@@ -130,6 +130,12 @@ class Axes(_Strict):
     data_slew: tuple[Seconds, ...] = Field(min_length=1)
     load: tuple[Farads, ...] = Field(min_length=1)
     constraint_load: Farads
+    constraint_loads: tuple[Farads, ...] = ()
+
+    @property
+    def loads_of_constraints(self) -> tuple[float, ...]:
+        """Loads [F] at which constraints are measured: ``constraint_load`` and any asked for beside it."""
+        return tuple(dict.fromkeys((self.constraint_load, *self.constraint_loads)))
 
     @model_validator(mode="after")
     def _ordered(self) -> Self:
@@ -143,7 +149,9 @@ class Axes(_Strict):
                 raise ValueError(
                     f"{name} of {values[-1]:g} is beyond {limit:g}: check the prefix of the unit"
                 )
-        if self.constraint_load <= 0:
+        if self.constraint_loads:
+            _ascending(self.constraint_loads, "constraint_loads")
+        if min(self.loads_of_constraints) <= 0:
             raise ValueError(f"constraint_load must be greater than zero, found {self.constraint_load:g}")
         return self
 
@@ -152,11 +160,13 @@ class Measure(_Strict):
     """How a number is defined: pushout as a fraction, slew fractions of supply, resolution in seconds.
 
     ``rest`` [s] is how long the cell is left alone before a trial; without it charflow finds one.
+    ``glitch`` is how far, as a fraction of supply, an output that must stay may move.
     """
 
     pushout: Fraction = Field(default=0.1, gt=0, le=10)
     slew_fractions: tuple[float, float] = (0.2, 0.8)
     resolution: Seconds = Field(default=0.1e-12, ge=1e-15, le=1e-9)
+    glitch: Fraction = Field(default=0.1, gt=0, lt=0.5)
     rest: Seconds | None = Field(default=None, ge=1e-11, le=1e-3)
 
     @model_validator(mode="after")

@@ -35,6 +35,7 @@ class Loaded:
     drives: dict[str, str] = field(default_factory=dict)
     loads: dict[str, str] = field(default_factory=dict)
     options: dict[str, str] = field(default_factory=dict)
+    saved: tuple[str, ...] | None = None  # ngspice keeps a list of saves for each circuit
 
 
 @dataclass
@@ -72,7 +73,6 @@ class Session:
         self.version: int = self._shared.ngspice_version
         self._circuits: OrderedDict[object, Loaded] = OrderedDict()
         self._current: Loaded | None = None
-        self._saved: tuple[str, ...] = ("?",)
         self._compatibility: str | None = None
         self._serial = 0
         self.command("set num_threads=1")
@@ -162,7 +162,7 @@ class Session:
         """
         if self._current is None:
             raise LoadError("no circuit is loaded")
-        self._save(save)
+        self._save(self._current, save)
         began = time.perf_counter()
         said = self.command(f"tran {number(step)} {number(stop)} 0 {number(step)}")
         self.clock.transient += time.perf_counter() - began
@@ -182,12 +182,12 @@ class Session:
         finally:
             self.command("destroy all")
 
-    def _save(self, nodes: tuple[str, ...]) -> None:
-        if nodes != self._saved:
+    def _save(self, circuit: Loaded, nodes: tuple[str, ...]) -> None:
+        if nodes != circuit.saved:
             self.command("delete all")
             if nodes:
                 self.command(f"save {' '.join(nodes)}")
-            self._saved = nodes
+            circuit.saved = nodes
 
     def _titles(self) -> dict[str, bool]:
         """Return the titles ngspice lists, newest first, and whether each is the current circuit."""

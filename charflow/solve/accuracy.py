@@ -13,9 +13,9 @@ from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, replace
 
 from charflow.errors import TrialError
-from charflow.plan.arcs import Arc, Kind
+from charflow.plan.arcs import PARTNER, Arc
 from charflow.plan.deck import Settings
-from charflow.plan.stimulus import Condition, at_offset
+from charflow.plan.stimulus import Condition, at_offset, pin_time
 from charflow.plan.trial import Outcome, Trial
 from charflow.sheet import Sheet
 from charflow.solve.constraint import Constraint, solve_constraint, window
@@ -95,19 +95,21 @@ def _probes(evaluate: Evaluate, sheet: Sheet, groups: Sequence[Group], corner: s
     solved: dict[Question, Constraint] = {}
     for group in groups:
         for arc in group.constraints:
+            if not arc.observed:
+                continue
             try:
                 base = reference(evaluate, sheet, arc, condition)
-                setup = solved.get(question(arc, Kind.SETUP)) if arc.kind is Kind.HOLD else None
+                setup = solved.get(question(arc, PARTNER[arc.kind])) if arc.kind in PARTNER else None
                 guess = None
                 if setup is not None and setup.value is not None:  # the aperture of an edge is narrow
-                    delay = max(base.delays.values())
+                    delay = base.slowest
                     guess = Guess(0.05 * delay - setup.value, 0.1 * delay, setup.crossing.slope)
                 found = solve_constraint(evaluate, rough, arc, condition, base, guess, lookout=False)
             except TrialError:
                 continue
             solved[question(arc)] = found
             if found.crossing.ending is Ending.PUSHOUT:
-                yield _Probe(condition, arc, found, max(base.delays.values()))
+                yield _Probe(condition, arc, found, base.slowest)
 
 
 def _places(evaluate: Evaluate, sheet: Sheet, probe: _Probe) -> tuple[Reference, float]:
@@ -116,7 +118,9 @@ def _places(evaluate: Evaluate, sheet: Sheet, probe: _Probe) -> tuple[Reference,
     base = reference(evaluate, sheet, arc, probe.condition)
     crossing = probe.solved.crossing
     until = window(sheet, arc, probe.condition, base, crossing.passes)
-    push = pushout(arc, evaluate(at_offset(sheet, arc, probe.condition, crossing.passes, until)), base)
+    trial = at_offset(sheet, arc, probe.condition, crossing.passes, until)
+    since = pin_time(arc, crossing.passes) if arc.since_pin else 0.0
+    push = pushout(arc, evaluate(trial), base, sheet.measure.glitch, sheet.measure.pushout, since)
     if push is None or push <= 0:
         return base, crossing.passes
     return base, crossing.passes + crossing.slope * math.log(push / sheet.measure.pushout)

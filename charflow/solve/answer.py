@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from charflow.plan.arcs import Arc, Kind, edge_name
+from charflow.plan.arcs import DELAYS, WIDTHS, Arc, Kind, edge_name
 from charflow.plan.stimulus import Condition
 
 
@@ -26,7 +26,7 @@ class Answer:
     output: str
     output_edge: str
     when: str
-    clock_slew: float
+    clock_slew: float | None
     data_slew: float | None
     load: float
     value: float | None
@@ -47,18 +47,19 @@ def answer(
     key: str,
 ) -> Answer:
     """Return the table entry for ``arc`` at ``condition``; pins that do not apply stay empty."""
-    constraint = quantity in (Kind.SETUP, Kind.HOLD)
-    output, rising = arc.observed[0]
+    delay = arc.kind in DELAYS
+    width = arc.kind in WIDTHS
+    output, rising = arc.observed[0] if arc.observed and (delay or width) else ("", False)
     return Answer(
         corner=condition.corner,
         quantity=quantity,
-        pin=arc.pin if constraint else "",
-        pin_edge=edge_name(arc.rising) if constraint else "",
-        related_pin=arc.related,
-        related_edge=edge_name(arc.related_rising),
-        output="" if constraint else output,
-        output_edge="" if constraint else edge_name(rising),
-        when=" & ".join(pin if level else f"!{pin}" for pin, level in arc.when),
+        pin="" if delay else arc.pin,
+        pin_edge="" if delay else edge_name(arc.rising),
+        related_pin="" if width else arc.related,
+        related_edge="" if width else edge_name(arc.related_rising),
+        output=output,
+        output_edge=edge_name(rising) if output else "",
+        when=arc.side,
         clock_slew=condition.clock_slew,
         data_slew=condition.data_slew,
         load=condition.load,

@@ -33,10 +33,11 @@ MEASURABLE = 2e-4  # pushouts smaller than this, relative to the limit's own 1, 
 
 
 class Ending(StrEnum):
-    """How a search ended; the first two carry a value."""
+    """How a search ended; the first three carry a value."""
 
     PUSHOUT = "pushout"
     CLIFF = "cliff"
+    RAMPS = "limited by its ramps"
     NEVER_FAILS = "never fails"
     NEVER_PASSES = "never passes"
 
@@ -182,6 +183,7 @@ class Search:
         # A capture that comes late can be measured, one that does not come cannot: err to the safe side.
         self._try(guess.offset + (guess.slope if guess.spread > 2.5 * guess.slope else 0.0))
         step = max(guess.spread, 2 * self.resolution)
+        trusted = 2  # predictions believed before steps grow whatever they say
         while self.passes is None or self.fails is None:
             up = self.passes is None
             edge = self.fails if up else self.passes
@@ -189,17 +191,20 @@ class Search:
             if not self.unsafe - reach < edge.offset < self.safe + reach:
                 return
             root = self._predicted(guess.slope)
-            over = step if edge.height(self.limit) is None else 0.4 * self.resolution
-            aim = edge.offset if root is None else max(root, edge.offset) if up else min(root, edge.offset)
-            self._try(aim + over if up else aim - over)
-            step *= 3
+            if edge.height(self.limit) is not None and root is not None and trusted:
+                trusted -= 1
+                over = 0.4 * self.resolution
+                self._try(max(root, edge.offset) + over if up else min(root, edge.offset) - over)
+            else:
+                self._try(edge.offset + step if up else edge.offset - step)
+                step *= 3
 
     def _close(self, slope: float) -> None:
         """Shrink the bracket to the resolution."""
         widths: list[float] = []
         while (width := self._width()) > self.resolution:
             widths.append(width)
-            stuck = len(widths) > 2 and width > widths[-3] / 2
+            stuck = len(widths) > 2 and width > widths[-3] / 2  # two steps have not halved it
             offset = None if stuck else self._aimed(slope, width)
             if offset is None:
                 assert self.passes is not None

@@ -19,6 +19,7 @@ from itertools import pairwise
 from charflow.plan.arcs import Kind
 from charflow.plan.behaviour import Behaviour, Bits
 from charflow.plan.trial import Outcome, Swing, Trial
+from charflow.sheet.logic import Bit
 
 NEVER = -math.inf
 
@@ -115,12 +116,30 @@ class FakeOutput:
 
 
 @dataclass(frozen=True)
+class _Race:
+    """A data edge and a clock edge: outputs before and after, pushout, and when the value is lost [s]."""
+
+    before: dict[str, Bit]
+    after: dict[str, Bit]
+    push: float | None
+    lost: float | None
+
+    def times(self, pin: str, delay: float, share: float) -> tuple[bool, list[float]]:
+        """Return the first level of output ``pin`` and when it crosses [s]."""
+        first = bool(self.before[pin])
+        if first is bool(self.after[pin]) or self.push is None:
+            return first, []
+        arrival = delay * (1 + share * self.push)
+        return first, [arrival] if self.lost is None else [arrival, arrival + self.lost]
+
+
+@dataclass(frozen=True)
 class FakeRegister:
     """A function from trial to outcome that follows ``cell`` and known curves.
 
     ``curves`` is keyed by (setup or hold, data pin, whether its edge rises). A capture that comes after
-    the trial's window shows as an output at its old rail, or on its way. Use :meth:`true_crossing` for the
-    answer a solver must find.
+    the trial's window shows as an output at its old rail, or on its way. :meth:`true_crossing` is the
+    answer a solver must find. Latches, sets and clears follow their function with no constraint of their own.
     """
 
     cell: Behaviour
@@ -129,24 +148,23 @@ class FakeRegister:
     fractions: tuple[float, float] = (0.2, 0.8)
 
     def __call__(self, trial: Trial) -> Outcome:
-        """Return what ``trial`` shows. The reference edge is the move of the control pin at time zero."""
+        """Return what ``trial`` shows.
+
+        Where the active clock edge at time zero meets one other edge, and their order matters, the curve
+        decides. All else follows the zero-delay model, each output a delay after the edge that moves it.
+        """
         state = self._stored(trial)
-        rest = trial.start.rest
-        captured, late, lost = self._captured(trial, state)
-        final = rest | {move.pin: move.rising for move in trial.moves}
-        before, after = self.cell.shown(state, rest), self.cell.shown(captured, final)
+        race = self._race(trial, state)
         loads = dict(trial.loads)
-        edge = 0.0 if self._clocked(trial) else max((move.at for move in trial.moves), default=0.0)
         swings = []
         for output in self.outputs:
-            start, end = bool(before[output.pin]), bool(after[output.pin])
             extra = output.per_farad * loads[output.pin]
-            times: list[float] = []
-            if start is not end and late is not None:
-                times.append(edge + (output.delay + extra) * (1 + output.share * late))
-                if lost is not None:
-                    times.append(times[0] + lost)
-            swings.append(self._swing(output.pin, start, times, output.transition + extra, trial.until))
+            delay = output.delay + extra
+            if race is None:
+                high, times = self._followed(trial, state, output.pin, delay)
+            else:
+                high, times = race.times(output.pin, delay, output.share)
+            swings.append(self._swing(output.pin, high, times, output.transition + extra, trial.until))
         return Outcome(tuple(swings), "formula")
 
     def true_crossing(
@@ -174,31 +192,43 @@ class FakeRegister:
             state = self.cell.after(state, before, now)
         return state
 
-    def _clocked(self, trial: Trial) -> bool:
-        return any(
-            move.pin == self.cell.control and move.at == 0.0 and move.rising is self.cell.active_high
-            for move in trial.moves
-        )
+    def _followed(self, trial: Trial, state: Bits, pin: str, delay: float) -> tuple[bool, list[float]]:
+        """Return the first level of output ``pin`` and when it crosses [s], by the zero-delay model."""
+        inputs = trial.start.rest
+        first = level = bool(self.cell.shown(state, inputs)[pin])
+        times: list[float] = []
+        for move in sorted(trial.moves, key=lambda move: move.at):
+            now = inputs | {move.pin: move.rising}
+            state = self.cell.after(state, inputs, now)
+            inputs = now
+            if bool(self.cell.shown(state, inputs)[pin]) is not level:
+                level = not level
+                times.append(move.at + delay)
+        return first, times
 
-    def _captured(self, trial: Trial, state: Bits) -> tuple[Bits, float | None, float | None]:
-        """Return the final state, the pushout (None if the outputs stay), and when it is lost again [s]."""
-        before = trial.start.rest
+    def _race(self, trial: Trial, state: Bits) -> _Race | None:
+        clocks = [move for move in trial.moves if move.pin == self.cell.control]
         others = [move for move in trial.moves if move.pin != self.cell.control]
-        after = before | {move.pin: move.rising for move in others}
-        if not self._clocked(trial):
-            final = before | {move.pin: move.rising for move in trial.moves}
-            return self.cell.after(state, before, final), 0.0, None
-        early, late = self.cell.captured(state, before), self.cell.captured(state, after)
-        if not others or early == late:
-            return early, 0.0, None
-        (data,) = others
+        if len(clocks) != 1 or len(others) != 1 or self.cell.transparent:
+            return None
+        (clock,), (data,) = clocks, others
+        if clock.at != 0.0 or clock.rising is not self.cell.active_high:
+            return None
+        rest = trial.start.rest
+        after = rest | {data.pin: data.rising}
+        early, late = self.cell.captured(state, rest), self.cell.captured(state, after)
+        if early == late:
+            return None
         kind = Kind.SETUP if early == state else Kind.HOLD
         curve = self.curves[kind, data.pin, data.rising]
-        clock_slew = next(move.slew for move in trial.moves if move.pin == self.cell.control)
-        offset = (-data.at if kind is Kind.SETUP else data.at) - curve.shift(data.slew, clock_slew)
-        push = curve.push(offset)
-        lost = curve.lost_after if offset < curve.lost else None
-        return (late if kind is Kind.SETUP else early), push, lost
+        offset = (-data.at if kind is Kind.SETUP else data.at) - curve.shift(data.slew, clock.slew)
+        final = after | {clock.pin: clock.rising}
+        return _Race(
+            before=self.cell.shown(state, rest),
+            after=self.cell.shown(late if kind is Kind.SETUP else early, final),
+            push=curve.push(offset),
+            lost=curve.lost_after if offset < curve.lost else None,
+        )
 
     def _swing(self, pin: str, high: bool, times: list[float], transition: float, until: float) -> Swing:
         """Return an output that begins ``high`` or low and crosses at ``times``, each with a linear ramp."""

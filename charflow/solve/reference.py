@@ -6,10 +6,10 @@ from collections.abc import Callable
 
 from charflow.errors import TrialError
 from charflow.plan.arcs import Arc
-from charflow.plan.stimulus import Condition, ramp_time, relaxed
+from charflow.plan.stimulus import Condition, contrary, ramp_time, relaxed
 from charflow.plan.trial import Outcome, Trial
 from charflow.sheet import Sheet
-from charflow.solve.verdict import NotSettled, Reference, begins_at_rest, delay_of
+from charflow.solve.verdict import NotSettled, Reference, begins_at_rest, delay_of, excursion
 
 Evaluate = Callable[[Trial], Outcome]
 
@@ -20,15 +20,15 @@ LONGEST_WINDOW = 1e-5
 def reference(evaluate: Evaluate, sheet: Sheet, arc: Arc, condition: Condition) -> Reference:
     """Return the relaxed delays and transitions [s] of the arc's outputs.
 
-    Raises :class:`TrialError` where an output does not move, or its delay is not positive (the pushout is
-    relative to it).
+    Raises :class:`TrialError` where an output does not move that should, or one moves that should stay.
     """
-    ramp = ramp_time(condition.clock_slew, sheet.measure.slew_fractions) / 2
-    until = FIRST_WINDOW + ramp
+    slews = (condition.clock_slew or 0.0, condition.data_slew or 0.0)
+    until = FIRST_WINDOW + ramp_time(max(slews), sheet.measure.slew_fractions) / 2
     while True:
-        outcome = evaluate(relaxed(sheet, arc, condition, until))
         try:
-            delays, transitions = _read(arc, outcome)
+            return _read(arc, evaluate(relaxed(sheet, arc, condition, until)), until, sheet.measure.glitch)
+        except _StaysError:
+            return _scaled(evaluate, sheet, arc, condition, until)
         except (NotSettled, TrialError) as error:
             until = 2 * until
             if until > LONGEST_WINDOW:
@@ -36,11 +36,13 @@ def reference(evaluate: Evaluate, sheet: Sheet, arc: Arc, condition: Condition) 
                     names = ", ".join(pin for pin, _ in arc.observed)
                     raise TrialError(f"{names} did not settle within {LONGEST_WINDOW:g} s") from None
                 raise
-        else:
-            return Reference(delays, transitions, until)
 
 
-def _read(arc: Arc, outcome: Outcome) -> tuple[dict[str, float], dict[str, float]]:
+class _StaysError(Exception):
+    """Internal: nothing moves, as it should; the time scale must come from another trial."""
+
+
+def _read(arc: Arc, outcome: Outcome, until: float, glitch: float) -> Reference:
     delays: dict[str, float] = {}
     transitions: dict[str, float] = {}
     for pin, rising in arc.observed:
@@ -48,11 +50,29 @@ def _read(arc: Arc, outcome: Outcome) -> tuple[dict[str, float], dict[str, float
         begins_at_rest(swing, rising)
         delay = delay_of(swing, rising)
         if delay is None:
-            raise TrialError(
-                f"{pin} does not {'rise' if rising else 'fall'} after the clock edge, data relaxed"
-            )
+            edge = f"{arc.related} {'rises' if arc.related_rising else 'falls'}"
+            raise TrialError(f"{pin} does not {'rise' if rising else 'fall'} after {edge}, all else relaxed")
         transition = swing.transitions[-1]
         if transition is None:
             raise NotSettled
         delays[pin], transitions[pin] = delay, transition
-    return delays, transitions
+    excursions = {pin: excursion(outcome.of(pin), level) for pin, level in arc.quiet}
+    for pin, found in excursions.items():
+        if found > glitch:
+            raise TrialError(f"{pin} should stay, but moves by {found:.0%} of supply with everything relaxed")
+    if not delays:
+        raise _StaysError
+    return Reference(delays, transitions, until, excursions)
+
+
+def _scaled(evaluate: Evaluate, sheet: Sheet, arc: Arc, condition: Condition, until: float) -> Reference:
+    """Return the reference of an arc whose outputs all stay, with the time in which they would move."""
+    outcome = evaluate(relaxed(sheet, arc, condition, until))
+    excursions = {pin: excursion(outcome.of(pin), level) for pin, level in arc.quiet}
+    for trial in contrary(sheet, arc, condition, until):
+        swings = [evaluate(trial).of(pin) for pin, _ in arc.quiet]
+        late = [swing.crossings[-1] for swing in swings if swing.crossings]
+        slow = [t for swing in swings for t in swing.transitions if t is not None]
+        if late:
+            return Reference({}, {}, until, excursions, max(*late, *slow, 1e-12))
+    raise TrialError(f"no trial moves {arc.quiet[0][0]}, so there is no time scale to search on")

@@ -9,10 +9,11 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
 from charflow.errors import TrialError
-from charflow.plan.arcs import Arc, Kind, arcs_of
+from charflow.plan.arcs import AFTER, BEFORE, DELAYS, PARTNER, WIDTHS, Arc, Kind
+from charflow.plan.derive import arcs_of
 from charflow.plan.stimulus import Condition, relaxed
 from charflow.plan.trial import Outcome, Start, Trial
-from charflow.sheet import Sheet
+from charflow.sheet import Axes, Sheet
 from charflow.solve.answer import Answer, answer
 from charflow.solve.constraint import Constraint, solve_constraint
 from charflow.solve.crossing import Ending, Guess, Shape, shape_of
@@ -32,32 +33,53 @@ DATA_SLEW_SHARE = 0.17  # of the change in data slew, by which setup grows and h
 class Group:
     """Arcs that begin from the same relaxed state and so share reference trials.
 
-    ``needs`` are the groups (by number) whose answers at the same slew teach this one: hold follows setup.
+    ``by_data`` tells that its rows run over the data slew axis. ``needs`` are the groups (by number)
+    whose answers at the same slew teach this one: hold follows setup.
     """
 
     start: Start
     arcs: tuple[Arc, ...]
     needs: tuple[int, ...] = ()
+    by_data: bool = False
 
     @property
     def delays(self) -> tuple[Arc, ...]:
         """The delay arcs."""
-        return tuple(arc for arc in self.arcs if arc.kind is Kind.CLK_TO_Q)
+        return tuple(arc for arc in self.arcs if arc.kind in DELAYS)
 
     @property
     def constraints(self) -> tuple[Arc, ...]:
-        """The setup and hold arcs."""
-        return tuple(arc for arc in self.arcs if arc.kind is not Kind.CLK_TO_Q)
+        """The arcs that constrain two edges against each other."""
+        return tuple(arc for arc in self.arcs if arc.kind not in DELAYS | WIDTHS)
+
+    @property
+    def widths(self) -> tuple[Arc, ...]:
+        """The pulse widths and periods."""
+        return tuple(arc for arc in self.arcs if arc.kind in WIDTHS)
+
+    def slews(self, axes: Axes) -> tuple[float, ...]:
+        """Return the slews [s] of the rows of this group."""
+        return axes.data_slew if self.by_data else axes.clock_slew
+
+    def points(self, axes: Axes) -> int:
+        """Return how many values a row of this group has."""
+        loads = len(axes.loads_of_constraints)
+        constraints = len(self.constraints) * len(axes.data_slew) + len(self.widths)
+        return 2 * len(self.delays) * len(axes.load) + loads * constraints
 
 
 def groups_of(sheet: Sheet) -> tuple[Group, ...]:
     """Return the arcs of the cell, grouped by what they share; groups that others need come first."""
-    together: dict[tuple[bool, Start], list[Arc]] = {}
+    together: dict[tuple[int, bool, Start], list[Arc]] = {}
     for arc in arcs_of(sheet):
-        together.setdefault((arc.kind is Kind.HOLD, arc.relaxed), []).append(arc)
-    ordered = sorted(together.items(), key=lambda item: item[0][0])
-    first = tuple(number for number, ((late, _), _) in enumerate(ordered) if not late)
-    return tuple(Group(start, tuple(arcs), first if late else ()) for (late, start), arcs in ordered)
+        late = 2 if arc.kind in WIDTHS else 1 if arc.kind in AFTER else 0
+        together.setdefault((late, arc.kind is Kind.DATA_TO_Q, arc.relaxed), []).append(arc)
+    ordered = sorted(together.items(), key=lambda item: item[0][:2])
+    first = tuple(n for n, ((late, by_data, _), _) in enumerate(ordered) if not late and not by_data)
+    return tuple(
+        Group(start, tuple(arcs), first if late == 1 else (), by_data)
+        for (late, by_data, start), arcs in ordered
+    )
 
 
 Question = tuple[str, str, bool, tuple[tuple[str, bool], ...]]
@@ -65,7 +87,8 @@ Question = tuple[str, str, bool, tuple[tuple[str, bool], ...]]
 
 def question(arc: Arc, kind: Kind | None = None) -> Question:
     """Return what identifies a constraint across rows and groups, of another ``kind`` if given."""
-    return ((kind or arc.kind).value, arc.pin, arc.rising, arc.when)
+    side = (*arc.when, *(((arc.neighbours, True),) if arc.neighbours else ()))
+    return ((kind or arc.kind).value, arc.pin, arc.rising, side)
 
 
 @dataclass(frozen=True)
@@ -124,7 +147,7 @@ def solve_row(
     a fraction, of constraints in seconds; it widens the brackets. A point that cannot be measured has no value and its reason as status.
     """
     solver = _Row(evaluate, ran, key_of, sheet, group, corner, clock_slew, tuple(neighbours), converged)
-    answers = [*solver.delays(), *solver.constraints()]
+    answers = [*solver.delays(), *solver.constraints(), *solver.widths()]
     return RowResult(clock_slew, tuple(answers), solver.hints)
 
 
@@ -151,13 +174,17 @@ class _Row:
     hints: dict[tuple[Question, float], Hint] = field(default_factory=dict)
 
     def delays(self) -> list[Answer]:
-        """Return clock-to-output delay and transition of each output over the load axis."""
+        """Return delay and transition of each output over the load axis."""
         answers: list[Answer] = []
         for arc in self.group.delays:
             for load in self.sheet.axes.load:
-                condition = Condition(self.corner, self.clock_slew, None, load)
-                answers += self._delay(arc, condition)
+                answers += self._delay(arc, self._condition(arc, load))
         return answers
+
+    def _condition(self, arc: Arc, load: float, data_slew: float | None = None) -> Condition:
+        if self.group.by_data:
+            return Condition(self.corner, None, self.clock_slew, load)
+        return Condition(self.corner, self.clock_slew, data_slew, load)
 
     def _delay(self, arc: Arc, condition: Condition) -> list[Answer]:
         before = self.ran()
@@ -168,50 +195,48 @@ class _Row:
         except TrialError as error:
             cost = self.ran() - before
             return [
-                answer(
-                    arc,
-                    condition,
-                    kind,
-                    None,
-                    None,
-                    one_line(error),
-                    cost if kind is Kind.CLK_TO_Q else 0,
-                    "",
-                )
-                for kind in (Kind.CLK_TO_Q, Kind.TRANSITION)
+                answer(arc, condition, kind, None, None, one_line(error), cost if kind is arc.kind else 0, "")
+                for kind in (arc.kind, Kind.TRANSITION)
             ]
         key = self.key_of(relaxed(self.sheet, arc, condition, found.until))
         status, cost = _with_rungs("measured", meter), self.ran() - before
         delay, transition = found.delays[pin], found.transitions[pin]
         width = 2 * self.converged[0] * abs(delay)  # an absolute error of the waveform's time axis
         return [
-            answer(arc, condition, Kind.CLK_TO_Q, delay, width, status, cost, key),
+            answer(arc, condition, arc.kind, delay, width, status, cost, key),
             answer(arc, condition, Kind.TRANSITION, transition, width, status, 0, key),
         ]
 
     def constraints(self) -> list[Answer]:
-        """Return setup and hold of each arc over the data slew axis."""
+        """Return setup, hold, recovery and removal of each arc over the data slew axis."""
         slews = self.sheet.axes.data_slew
         order = [index for index, _ in ends_then_middles(len(slews), last_first=False)]
-        found: dict[tuple[int, int], Answer] = {}
+        found: dict[tuple[int, int, int], Answer] = {}
         for number, arc in enumerate(self.group.constraints):
-            for index in order:
-                condition = Condition(
-                    self.corner, self.clock_slew, slews[index], self.sheet.axes.constraint_load
-                )
-                found[number, index] = self._constraint(arc, condition)
+            for row, load in enumerate(self.sheet.axes.loads_of_constraints):
+                for index in order:
+                    found[number, row, index] = self._constraint(
+                        arc, self._condition(arc, load, slews[index])
+                    )
         return [found[key] for key in sorted(found)]
 
+    def widths(self) -> list[Answer]:
+        """Return pulse widths and periods, one a load."""
+        return [
+            self._constraint(arc, self._condition(arc, load))
+            for arc in self.group.widths
+            for load in self.sheet.axes.loads_of_constraints
+        ]
+
     def _constraint(self, arc: Arc, condition: Condition) -> Answer:
-        assert condition.data_slew is not None
         before = self.ran()
         meter = Meter(self.evaluate, self.ran)
         axes = self.sheet.axes  # the first point solved is surveyed; the one furthest from it gets a lookout
         opposite = (condition.clock_slew, condition.data_slew) == (axes.clock_slew[0], axes.data_slew[-1])
         try:
             base = reference(meter, self.sheet, arc, condition)
-            delay = max(base.delays.values())
-            guess = self._guess(arc, condition.data_slew, delay)
+            delay = base.slowest
+            guess = None if arc.kind in WIDTHS else self._guess(arc, condition.data_slew or 0.0, delay)
             result = solve_constraint(meter, self.sheet, arc, condition, base, guess, lookout=opposite)
         except TrialError as error:
             return answer(arc, condition, arc.kind, None, None, one_line(error), self.ran() - before, "")
@@ -220,7 +245,8 @@ class _Row:
             return answer(arc, condition, arc.kind, None, None, _why(result), cost, "")
         shape = shape_of(result.crossing, self.sheet.measure.pushout)
         hint = Hint(result.value, result.crossing.slope, delay, self.corner, shape)
-        self.hints[question(arc), condition.data_slew] = hint
+        if condition.load == axes.constraint_load and condition.data_slew is not None:
+            self.hints[question(arc), condition.data_slew] = hint
         status = _with_rungs(result.crossing.ending.value, meter)
         key = self.key_of(result.deciding) if result.deciding else ""
         width = result.crossing.bracket + 2 * self.converged[1]
@@ -252,7 +278,7 @@ class _Row:
         if len(values) > 1:
             return Guess(between(data_slew, values), 2 * slope, slope, like.shape)
         (slew, value), *_ = values.items()
-        later = data_slew - slew if arc.kind is Kind.SETUP else slew - data_slew
+        later = data_slew - slew if arc.kind in BEFORE else slew - data_slew
         return Guess(value + DATA_SLEW_SHARE * later, 2 * slope + 0.15 * abs(later), slope, like.shape)
 
     def _likest(self, arc: Arc, data_slew: float, here: dict[float, Hint]) -> Hint | None:
@@ -268,7 +294,7 @@ class _Row:
         return None
 
     def _partners(self, arc: Arc) -> list[Hint]:
-        asked = question(arc, Kind.SETUP)
+        asked = question(arc, PARTNER.get(arc.kind))
         return [hint for row in self.neighbours for (q, _), hint in row.hints.items() if q == asked]
 
     def _expected(self, arc: Arc, data_slew: float, delay: float) -> float | None:
@@ -286,7 +312,7 @@ class _Row:
             value = hint.value * (delay / hint.delay if hint.corner != self.corner else 1.0)
             theirs = self._setup(arc, row.clock_slew, data_slew)
             known[row.clock_slew] = value if setup is None or theirs is None else value + theirs
-        if len(known) == 1 and arc.kind is Kind.SETUP and self.clock_slew not in known:
+        if len(known) == 1 and arc.kind in BEFORE and self.clock_slew not in known:
             (value,) = known.values()
             moved = next(
                 delay - hint.delay for hint in self._taught(arc, data_slew) if hint.corner == self.corner
@@ -301,10 +327,10 @@ class _Row:
         return [row.hints[asked] for row in self.neighbours if asked in row.hints]
 
     def _setup(self, arc: Arc, clock_slew: float, data_slew: float) -> float | None:
-        """Return the setup of the same data edge at another point, where ``arc`` is a hold and it is known."""
-        if arc.kind is not Kind.HOLD:
+        """Return the setup of the same data edge at another point, where ``arc`` is a hold (or the like) and it is known."""
+        if arc.kind not in PARTNER:
             return None
-        asked = (question(arc, Kind.SETUP), data_slew)
+        asked = (question(arc, PARTNER[arc.kind]), data_slew)
         rows = (row for row in self.neighbours if row.clock_slew == clock_slew and asked in row.hints)
         row = next(rows, None)
         return None if row is None else row.hints[asked].value

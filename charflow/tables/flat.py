@@ -25,7 +25,7 @@ class Row:
     output: str
     output_edge: str
     when: str
-    clock_slew_ps: float
+    clock_slew_ps: float | None
     data_slew_ps: float | None
     load_ff: float
     value_ps: float | None
@@ -37,7 +37,7 @@ class Row:
 
 COLUMNS = tuple(field.name for field in fields(Row))
 _NUMBERS = {"clock_slew_ps", "data_slew_ps", "load_ff", "value_ps", "bracket_ps"}
-_ALWAYS = {"clock_slew_ps", "load_ff", "transients"}
+_ALWAYS = {"load_ff", "transients"}
 _LARGEST = 1e15
 
 
@@ -53,7 +53,7 @@ def row_of(answer: Answer) -> Row:
         output=answer.output,
         output_edge=answer.output_edge,
         when=answer.when,
-        clock_slew_ps=_scaled(answer.clock_slew, 1e12, 6),
+        clock_slew_ps=None if answer.clock_slew is None else _scaled(answer.clock_slew, 1e12, 6),
         data_slew_ps=None if answer.data_slew is None else _scaled(answer.data_slew, 1e12, 6),
         load_ff=_scaled(answer.load, 1e15, 6),
         value_ps=None if answer.value is None else _scaled(answer.value, 1e12, 4),

@@ -8,7 +8,7 @@ from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 from charflow.tables.flat import Row
-from charflow.tables.grid import Grid, grids_of
+from charflow.tables.grid import Grid, axis_unit, grids_of
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -25,11 +25,13 @@ def value_text(row: Row | None) -> str:
 
 
 def _heading(grid: Grid, column: float) -> str:
-    return f"{column:g} fF" if grid.column == "load" else f"{column:g} ps"
+    return f"{column:g} {axis_unit(grid.column)}"
 
 
-def _across(grid: Grid) -> str:
-    return "output load" if grid.column == "load" else "data slew"
+def _corner_cell(grid: Grid) -> str:
+    words = {"load": "output load", "clock_slew": "input slew", "data_slew": "data slew"}
+    down = "clock slew" if grid.column == "data_slew" else words[grid.row]
+    return f"{down} \\ {words[grid.column]}"
 
 
 def to_markdown(cell: str, conditions: Sequence[str], rows: Sequence[Row]) -> str:
@@ -41,20 +43,25 @@ def to_markdown(cell: str, conditions: Sequence[str], rows: Sequence[Row]) -> st
             corner = grid.corner
             lines += [f"## Corner {_plain(corner)}", ""]
         lines += [f"### {_plain(grid.title[0].upper() + grid.title[1:])} [ps]", ""]
-        lines.append(
-            f"| clock slew \\ {_across(grid)} | {' | '.join(_heading(grid, c) for c in grid.columns)} |"
-        )
+        lines.append(f"| {_corner_cell(grid)} | {' | '.join(_heading(grid, c) for c in grid.columns)} |")
         lines.append("|---:" * (len(grid.columns) + 1) + "|")
-        for slew in grid.clock_slews:
+        for slew in grid.rows:
             cells = " | ".join(value_text(grid.at(slew, column)) for column in grid.columns)
             lines.append(f"| {slew:g} ps | {cells} |")
         lines.append("")
         holes = [row for row in grid.cells.values() if row.value_ps is None]
         for row in holes:
-            lines.append(f"- no value at clock slew {row.clock_slew_ps:g} ps: {_plain(row.status)}")
+            lines.append(f"- no value at {_place(row)}: {_plain(row.status)}")
         if holes:
             lines.append("")
     return "\n".join(lines)
+
+
+def _place(row: Row) -> str:
+    slews = (("clock slew", row.clock_slew_ps), ("data slew", row.data_slew_ps))
+    return ", ".join(
+        [f"{name} {value:g} ps" for name, value in slews if value is not None] + [f"{row.load_ff:g} fF"]
+    )
 
 
 def _plain(text: str) -> str:
@@ -79,10 +86,10 @@ def print_tables(console: Console, rows: Sequence[Row]) -> None:
             box=box.SIMPLE_HEAD,
             title_style="",
         )
-        table.add_column(f"clock slew \\ {_across(grid)}", justify="right")
+        table.add_column(_corner_cell(grid), justify="right")
         for column in grid.columns:
             table.add_column(_heading(grid, column), justify="right")
-        for slew in grid.clock_slews:
+        for slew in grid.rows:
             table.add_row(f"{slew:g} ps", *(value_text(grid.at(slew, column)) for column in grid.columns))
         console.print(table)
     for row in rows:

@@ -15,37 +15,51 @@ STANDINS = Path(__file__).parent / "standins"
 ROOT = Path(__file__).parent.parent.parent
 
 
-@pytest.fixture
-def formula_run(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> Callable[..., Any]:
-    """Run a campaign in this process; its workers answer from formulas. Faults go in by keyword."""
+RunFormula = Callable[..., Any]
+
+
+def _run(
+    sheet: Path,
+    out: Path,
+    *,
+    workers: int = 1,
+    corners: tuple[str, ...] | None = None,
+    tell: Callable[[Any], None] = lambda progress: None,
+    say: Callable[[str], None] = lambda text: None,
+    version: int = 39,
+    **faults: object,
+) -> Any:
     from charflow.campaign.run import run_campaign
     from charflow.sheet import read_sheet
 
-    monkeypatch.syspath_prepend(STANDINS)
-    import formula_worker
+    with pytest.MonkeyPatch.context() as patch:
+        patch.syspath_prepend(STANDINS)
+        import formula_worker
 
-    monkeypatch.setattr("charflow.campaign.pool.work", formula_worker.work)
-    monkeypatch.setattr("charflow.simulate.library.library_version", lambda: 39)
+        patch.setattr("charflow.campaign.pool.work", formula_worker.work)
+        patch.setattr("charflow.simulate.library.library_version", lambda: version)
+        for name, value in {**faults, "version": version}.items():
+            patch.setenv(f"FORMULA_{name.upper()}", str(value))
+        return run_campaign(read_sheet(sheet), out, workers, corners, tell, say)
 
-    def run(
-        sheet: Path,
-        out: str = "run",
-        *,
-        workers: int = 2,
-        corners: tuple[str, ...] | None = None,
-        tell: Callable[[Any], None] = lambda progress: None,
-        say: Callable[[str], None] = lambda text: None,
-        **faults: object,
-    ) -> Any:
-        with pytest.MonkeyPatch.context() as patch:
-            for name, value in faults.items():
-                patch.setenv(f"FORMULA_{name.upper()}", str(value))
-            return run_campaign(read_sheet(sheet), tmp_path / out, workers, corners, tell, say)
+
+@pytest.fixture(scope="session")
+def formula_run_in() -> RunFormula:
+    """Run a campaign in this process into a folder; its workers answer from formulas."""
+    return _run
+
+
+@pytest.fixture
+def formula_run(tmp_path: Path) -> RunFormula:
+    """Run a campaign into a folder below the test's own. Faults go in by keyword."""
+
+    def run(sheet: Path, out: str = "run", **details: Any) -> Any:
+        return _run(sheet, tmp_path / out, **details)
 
     return run
 
 
-@pytest.fixture
+@pytest.fixture(scope="module")
 def formula_cli() -> Iterator[Callable[..., subprocess.Popen[str]]]:
     """Start the charflow command with formulas for ngspice, in a process group of its own."""
     begun: list[subprocess.Popen[str]] = []

@@ -1,9 +1,10 @@
 """A worker that answers trials from formulas instead of ngspice, and fails as the environment says.
 
 ``FORMULA_PACE`` [s] is slept at each trial. ``FORMULA_FAULT`` is what happens at the trials named by
-``FORMULA_LOAD`` (the load of Q in fF, of trials in which the clock alone moves): ``die``, ``hang``,
-``exit``, ``error`` or ``odd``. With ``FORMULA_ONCE`` (a file) it happens only while that does not exist.
-``FORMULA_SLOWER`` [s] is added to every delay.
+``FORMULA_LOAD`` (the load of Q in fF, of trials in which the clock alone moves): ``die``, ``abort``,
+``exit``, ``hang``, ``error`` or ``odd``. With
+``FORMULA_ONCE`` (a file) it happens only while that does not exist.
+``FORMULA_SLOWER`` [s] is added to every delay. ``FORMULA_VERSION`` is the simulator's.
 """
 
 from __future__ import annotations
@@ -27,10 +28,9 @@ from charflow.solve.fake import Curve, FakeOutput, FakeRegister
 class FormulaSession:
     """What a worker asks of a session."""
 
-    version = 39
-
     def __init__(self) -> None:
         self.clock = Clock()
+        self.version = int(os.environ.get("FORMULA_VERSION", "39"))
 
 
 class FormulaEngine:
