@@ -184,6 +184,7 @@ def _job(campaign: Campaign, node: Node) -> Job:
         neighbours=tuple(known_rows),
         known=known,
         poisoned=frozenset(key for key, count in campaign.deaths.items() if count > 1),
+        folder=str(campaign.store.path.parent.absolute()),
     )
 
 

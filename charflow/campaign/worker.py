@@ -13,10 +13,12 @@ from typing import Any
 
 from charflow.campaign.codec import outcome_from, outcome_to, trial_to
 from charflow.campaign.journal import Journal
-from charflow.errors import WorkerDied
+from charflow.errors import FunctionError, TrialError, WorkerDied
 from charflow.plan.circuit import Circuit
 from charflow.plan.deck import Settings
 from charflow.plan.trial import Outcome, Trial
+from charflow.probe.function import Mismatch
+from charflow.probe.picture import draw_mismatch
 from charflow.probe.prepare import Prepared, prepare
 from charflow.sheet import Sheet
 from charflow.simulate.engine import Engine
@@ -30,6 +32,7 @@ class Job:
     """One piece of work, called ``name`` to people; its trials are kept under ``label``.
 
     ``known`` are outcomes (JSON) by trial key, ``poisoned`` the keys of trials that killed workers.
+    ``folder`` takes the picture of a function that is not what the sheet says.
     """
 
     label: str
@@ -42,6 +45,7 @@ class Job:
     neighbours: tuple[RowResult, ...] = ()
     known: dict[str, Any] = field(default_factory=dict)
     poisoned: frozenset[str] = frozenset()
+    folder: str = ""
 
 
 @dataclass(frozen=True)
@@ -153,9 +157,27 @@ def work(job: Job) -> Done:
     return Done(job.name, session.clock - before, row=row, whole=bench.whole)
 
 
+def _shown(job: Job, mismatch: Mismatch) -> FunctionError:
+    """Return the error of a mismatch, with its waveforms drawn into the run folder."""
+    error = mismatch.error
+    if not job.folder:
+        return error
+    circuit = job.circuit.rested(mismatch.rest)
+    path = Path(job.folder) / f"mismatch_{circuit.corner}.png"
+    try:
+        waves, _, zero = _engine(circuit, Settings()).waves(mismatch.flip.trial)
+        draw_mismatch(path, circuit, mismatch.flip, waves, zero, error.message)
+    except (TrialError, OSError):
+        return error
+    return FunctionError(error.message, where=error.where, todo=f"Waveforms: {path}. {error.todo}".strip())
+
+
 def _prepare(job: Job, before: Clock) -> Done:
     """Prove the function of a corner and choose its rest time and settings."""
-    prepared = prepare(lambda circuit: Bench(job, circuit, Settings()), job.sheet, job.circuit)
+    try:
+        prepared = prepare(lambda circuit: Bench(job, circuit, Settings()), job.sheet, job.circuit)
+    except Mismatch as mismatch:
+        raise _shown(job, mismatch) from None
     rested = prepared.circuit
     accuracy = choose_settings(
         lambda settings: Bench(job, rested, settings), job.sheet, groups_of(job.sheet), rested.corner

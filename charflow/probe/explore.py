@@ -14,7 +14,7 @@ from charflow.probe.switch import State, Switches
 from charflow.probe.transistors import Network
 
 MAX_INPUTS = 10
-MAX_PLACES = 30_000
+MAX_PLACES = 10_000
 SECONDS = 60.0  # of exploring
 MAX_SEARCH = 20_000  # settlings spent on finding a first known state
 

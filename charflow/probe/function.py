@@ -27,7 +27,16 @@ class Flip:
     trial: Trial
     before: tuple[tuple[str, bool | None], ...]
     after: tuple[tuple[str, bool | None], ...]
-    pulses: bool
+
+
+class Mismatch(Exception):  # noqa: N818  # not an error of its own: it carries one to where it can be shown
+    """A flip that does not do what the sheet says: the ``error`` for the user and the ``flip`` to look at."""
+
+    def __init__(self, error: FunctionError, flip: Flip) -> None:
+        super().__init__(str(error))
+        self.error = error
+        self.flip = flip
+        self.rest = 0.0  # s, where the caller knows it
 
 
 def flips(cell: Behaviour, sheet: Sheet, corner: str, until: float) -> Iterator[Flip]:
@@ -47,7 +56,6 @@ def flips(cell: Behaviour, sheet: Sheet, corner: str, until: float) -> Iterator[
                     trial=Trial(corner, start, (Move(pin, now[pin], 0.0, slew),), loads, until),
                     before=tuple(cell.shown(state, vector).items()),
                     after=tuple(cell.shown(after, now).items()),
-                    pulses=False,
                 )
 
 
@@ -62,7 +70,8 @@ def _words(cell: Behaviour, state: Bits, vector: dict[str, bool], pin: str, risi
 def check_function(evaluate: Evaluate, cell: Behaviour, sheet: Sheet, corner: str, until: float) -> int:
     """Prove the cell's function at one corner and return how many flips were tried.
 
-    Raises :class:`FunctionError` naming the first vector that does not do what the sheet says.
+    Raises :class:`Mismatch` at the first vector that does not do what the sheet says, and
+    :class:`FunctionError` where an output should never move at all.
     """
     tried = 0
     moved: set[str] = set()
@@ -73,7 +82,10 @@ def check_function(evaluate: Evaluate, cell: Behaviour, sheet: Sheet, corner: st
             raise error.at(f"checking the function, {flip.words}") from None
         tried += 1
         for swing in outcome.swings:
-            _compare(flip, swing, dict(flip.before)[swing.pin], dict(flip.after)[swing.pin], corner)
+            try:
+                _compare(flip, swing, dict(flip.before)[swing.pin], dict(flip.after)[swing.pin], corner)
+            except FunctionError as error:
+                raise Mismatch(error, flip) from None
             if dict(flip.before)[swing.pin] != dict(flip.after)[swing.pin]:
                 moved.add(swing.pin)
     still = [pin for pin in sheet.outputs if pin not in moved]

@@ -5,15 +5,15 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 
-from charflow.errors import TrialError
+from charflow.errors import FunctionError, TrialError
 from charflow.plan.arcs import Arc, Kind
 from charflow.plan.behaviour import behaviour_of
 from charflow.plan.circuit import Circuit
 from charflow.plan.derive import arcs_of
 from charflow.plan.stimulus import Condition, ramp_time, relaxed
 from charflow.plan.trial import Outcome, Trial
-from charflow.probe.function import check_function
-from charflow.probe.rest import Rest, proved_rest, shortest_working, stated_rest
+from charflow.probe.function import Mismatch, check_function
+from charflow.probe.rest import Rest, leaks, proved_rest, shortest_working, stated_rest
 from charflow.sheet import Sheet
 
 MakeEvaluate = Callable[[Circuit], Callable[[Trial], Outcome]]
@@ -30,13 +30,17 @@ class Prepared:
 def prepare(make: MakeEvaluate, sheet: Sheet, circuit: Circuit) -> Prepared:
     """Prove the function of ``sheet`` at the corner of ``circuit`` and choose the rest time.
 
-    ``make`` turns a circuit into a function from trial to outcome. Raises :class:`FunctionError` where
-    the cell does something else than the sheet says.
+    ``make`` turns a circuit into a function from trial to outcome. Raises :class:`Mismatch` where
+    the cell does something else than the sheet says, :class:`FunctionError` where it never comes to rest.
     """
     cell = behaviour_of(sheet)
 
     def works(rest: float) -> int:
-        return check_function(make(circuit.rested(rest)), cell, sheet, circuit.corner, until=rest)
+        try:
+            return check_function(make(circuit.rested(rest)), cell, sheet, circuit.corner, until=rest)
+        except Mismatch as mismatch:
+            mismatch.rest = rest
+            raise
 
     def delays(rest: float) -> tuple[float, ...]:
         evaluate = make(circuit.rested(rest))
@@ -45,7 +49,10 @@ def prepare(make: MakeEvaluate, sheet: Sheet, circuit: Circuit) -> Prepared:
     arcs = [arc for arc in arcs_of(sheet) if arc.kind in (Kind.CLK_TO_Q, Kind.GATE_TO_Q)]
     stated = sheet.measure.rest
     if stated is not None:
-        rest = stated_rest(delays, stated, works(stated))
+        try:
+            rest = stated_rest(delays, stated, works(stated))
+        except Mismatch as mismatch:
+            raise _leak(mismatch, stated) if leaks(works, stated) else mismatch from None
     else:
         first, count = shortest_working(works)
         rest = proved_rest(delays, first, count)
@@ -63,3 +70,15 @@ def _delay(evaluate: Callable[[Trial], Outcome], sheet: Sheet, arc: Arc, corner:
     if not swing.settled(rising) or not swing.crossings:
         raise TrialError(f"{pin} does not {'rise' if rising else 'fall'} within {end:g} s of the clock edge")
     return swing.crossings[-1]
+
+
+def _leak(mismatch: Mismatch, rest: float) -> Mismatch:
+    """Return the mismatch in the words of a cell that forgets."""
+    error = FunctionError(
+        f"the cell loses what it stores within a rest of {rest:g} s: {mismatch.error.message}",
+        where=mismatch.error.where,
+        todo="It is dynamic: give measure.rest the longest pause its clock ever makes.",
+    )
+    leak = Mismatch(error, mismatch.flip)
+    leak.rest = rest
+    return leak

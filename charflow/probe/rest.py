@@ -12,6 +12,7 @@ from dataclasses import dataclass
 
 from charflow.errors import FunctionError, TrialError
 from charflow.plan.trial import Outcome, Trial
+from charflow.probe.function import Mismatch
 
 FIRST_REST = 1e-9  # s
 LONGEST_REST = 1e-6
@@ -39,10 +40,23 @@ def shortest_working(works: Callable[[float], int], first: float = FIRST_REST) -
     while True:
         try:
             return rest, works(rest)
-        except (FunctionError, TrialError):
+        except (Mismatch, FunctionError, TrialError):
             rest *= _STEP
             if rest > LONGEST_REST:
                 raise
+
+
+def leaks(works: Callable[[float], int], rest: float) -> bool:
+    """Tell whether a cell that fails its function check after ``rest`` [s] passes after a shorter one."""
+    shorter = rest / _STEP
+    while shorter >= FIRST_REST / 2:
+        try:
+            works(shorter)
+        except (Mismatch, TrialError):
+            shorter /= _STEP
+        else:
+            return True
+    return False
 
 
 def proved_rest(delays: Callable[[float], tuple[float, ...]], rest: float, flips: int) -> Rest:

@@ -76,7 +76,9 @@ def pushout(
     worst: float | None = None
     for pin, rising in arc.observed:
         swing = outcome.of(pin)
-        if arc.kind is Kind.MIN_PERIOD:  # it shows what the last edge captures, gives it up, and takes it again
+        if (
+            arc.kind is Kind.MIN_PERIOD
+        ):  # it shows what the last edge captures, gives it up, and takes it again
             begins_at_rest(swing, not rising)
             if len(swing.crossings) < 2:
                 return None

@@ -41,7 +41,7 @@ FLOOR = 30e-12  # s; 0.1 % of it are the 0.03 ps allowed for a short delay
 
 @dataclass(frozen=True)
 class Task:
-    """One value of charflow to be checked; ``halved`` asks how far half the step and tolerance move the truth."""
+    """One value of charflow to be checked; ``halved`` asks how far half the step moves the truth."""
 
     sheet: Sheet
     circuit: Circuit
@@ -143,12 +143,12 @@ class Truth:
         self.slope = 5e-12
 
     def height(self, offset: float) -> float | None:
-        """Return log(pushout / limit) at ``offset`` [s], None where nothing is captured, -9 where it is nil."""
+        """Return log(pushout / limit) at ``offset`` [s]; None where nothing is captured, -9 for no pushout."""
         until = window(self.sheet, self.arc, self.condition, self.base, offset)
         while True:
             outcome = self.evaluate(at_offset(self.sheet, self.arc, self.condition, offset, until))
             try:
-                push = pushout(self.arc, outcome, self.base)
+                push = pushout(self.arc, outcome, self.base, self.sheet.measure.glitch, self.limit)
             except NotSettled:
                 until *= 2
                 continue

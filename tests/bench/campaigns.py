@@ -1,4 +1,4 @@
-"""charflow's own cost: whole runs into a temporary folder, watched from outside, with every transient accounted for."""
+"""charflow's own cost: whole runs, watched from outside, with every transient accounted for."""
 
 from __future__ import annotations
 
@@ -73,7 +73,7 @@ class Run:
     starting: float
     rows: float
     by_purpose: dict[str, int]
-    first_of: dict[str, int]
+    most: int
 
     @property
     def constraints(self) -> list[Answer]:
@@ -82,7 +82,7 @@ class Run:
 
     @property
     def overhead(self) -> float:
-        """The share of the wall time, model load apart, in which ngspice was not in a transient; one worker."""
+        """The share of one worker's wall time, model load apart, in which no transient ran."""
         return 1 - self.result.clock.transient / (self.wall - self.result.clock.load)
 
     @property
@@ -106,7 +106,36 @@ class Run:
 
     @property
     def transients_mean_all_in(self) -> float:
-        """The same with a share of function proof, rest and settings choice as large as that of the tables."""
+        """The same with as large a share of the preparation as of the tables."""
+        return self.share * self.result.transients / len(self.constraints)
+
+    @property
+    def transients_max(self) -> int:
+        """The most transients of one value, as if it had also paid for its start's settling and reference."""
+        return self.most + (1 if self.shared_references else 0)
+
+    @property
+    def shared_references(self) -> int:
+        """References that a delay asked for first, though setup and hold need them too."""
+        seen = [a for a in self.result.answers if a.quantity is Kind.CLK_TO_Q]
+        outputs = {a.output for a in seen}
+        load = self.constraints[0].load
+        return sum(a.transients for a in seen if a.load == load) if len(outputs) == 1 else 0
+
+    @property
+    def charged(self) -> int:
+        """Transients that setup and hold needed: their own, their references, settling in the tables."""
+        own = sum(answer.transients for answer in self.constraints)
+        return own + self.shared_references + self.by_purpose["settling_tables"]
+
+    @property
+    def transients_mean(self) -> float:
+        """Transients a setup or hold value; reference and settling in, preparation of the corner not."""
+        return self.charged / len(self.constraints)
+
+    @property
+    def transients_mean_all_in(self) -> float:
+        """The same with as large a share of the preparation as of the tables."""
         return self.share * self.result.transients / len(self.constraints)
 
     @property
@@ -148,7 +177,7 @@ def measure(sheet: Sheet, workers: int) -> Run:
     purposes = {"function_proof": 0, "rest": 0, "settings": 0} | Counter(
         _purpose(t, sheet) for t in preparing
     )
-    first_of = _settled_rows(watch, Counter(label for label, _ in stored))
+    settled, most = _settled(watch, Counter(label for label, _ in stored))
     by_quantity: Counter[str] = Counter()
     for answer in result.answers:
         name = "setup_hold" if answer.quantity in CONSTRAINTS else "delays" if _delay(answer) else "others"
@@ -156,7 +185,7 @@ def measure(sheet: Sheet, workers: int) -> Run:
     in_preparation = sum(done.clock.transients for job, done, _ in watch.done if job.group is None)
     settling = {
         "settling_preparation": in_preparation - len(preparing),
-        "settling_tables": sum(first_of.values()),
+        "settling_tables": settled,
     }
     return Run(
         result,
@@ -165,7 +194,7 @@ def measure(sheet: Sheet, workers: int) -> Run:
         watch.first - began,
         ended - max(prepared),
         {**by_quantity, **purposes, **settling},
-        first_of,
+        most,
     )
 
 
@@ -192,19 +221,19 @@ def _purpose(trial: dict[str, object], sheet: Sheet) -> str:
     return {slews[0]: "function_proof", slews[len(slews) // 2]: "rest"}.get(clock, "settings")
 
 
-def _settled_rows(watch: Watch, stored: Counter[str]) -> dict[str, int]:
-    """Return by row how many transients its jobs ran that are no trials, so settled the cell or were repeated."""
-    ran: Counter[str] = Counter()
-    rows: dict[str, str] = {}
+def _settled(watch: Watch, stored: Counter[str]) -> tuple[int, int]:
+    """Return how many transients of the tables are no trials, and the most that one value may have cost.
+
+    Such transients settle the cell or repeat what did not converge. They are counted for each start and clock
+    slew, and all of them are charged to the dearest setup or hold value there.
+    """
+    extra: Counter[str] = Counter({label: -count for label, count in stored.items()})
+    dearest: Counter[str] = Counter()
     for job, done, _ in watch.done:
-        if job.group is not None:
-            ran[job.label] += done.clock.transients
-            rows[job.label] = f"{job.circuit.corner} {job.clock_slew}"
-    settled: Counter[str] = Counter()
-    for label, count in ran.items():
-        settled[rows[label]] += count - stored[label]
-    return dict(settled)
-
-
-def _row(answer: Answer) -> str:
-    return f"{answer.corner} {answer.clock_slew}"
+        if job.group is None or done.row is None:
+            continue
+        extra[job.label] += done.clock.transients
+        own = (a.transients for a in done.row.answers if a.quantity in CONSTRAINTS)
+        dearest[job.label] = max(dearest[job.label], *own, 0)
+    labels = {job.label for job, _, _ in watch.done if job.group is not None}
+    return sum(extra[label] for label in labels), max(dearest[label] + extra[label] for label in labels)

@@ -26,7 +26,7 @@ GAP = 0.8e-9  # s between the ramps of the stimulus, and once more at its end
 
 @dataclass(frozen=True)
 class Value:
-    """One setup or hold value [s], its slews [s], the wall and processor time [s] it took, and how many processes."""
+    """One setup or hold value [s], its slews [s], its wall and processor time [s], how many processes."""
 
     kind: str
     edge: str
@@ -78,7 +78,7 @@ class Loop:
 
     @property
     def _times(self) -> tuple[float, float, float, float, float]:
-        """The 50 % points [s] of first pulse, its end, data change and measured edge, and the end of it all."""
+        """The 50 % points [s] of first edge, its return, data change and measured edge; the end of it all."""
         clock, data = self._ramp(self.clock_slew), self._ramp(self.data_slew)
         first = GAP / 2 + clock / 2
         fall = first + clock + GAP

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from itertools import pairwise
 
 import pytest
 
@@ -27,7 +28,7 @@ def replayed(cell: Behaviour, start: Start) -> Bits:
     """Return the state after the vectors of ``start``, applied to a cell nothing is known of."""
     vectors = [dict(vector) for vector in start.vectors]
     state = cell.after(cell.unknown, vectors[0], vectors[0])
-    for before, now in zip(vectors, vectors[1:], strict=False):
+    for before, now in pairwise(vectors):
         assert sum(before[pin] != now[pin] for pin in cell.inputs) == 1
         state = cell.after(state, before, now)
     return state

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -91,7 +92,7 @@ def test_a_pulse_has_its_width_between_the_50_percent_points_whether_its_ramps_m
 ) -> None:
     pulse = trial(Move("CK", up, 0.0, first), Move("CK", not up, width, second), CK=not up, D=False)
     points = waveform(pulse, "CK", (0.2, 0.8))
-    assert all(b[0] > a[0] for a, b in zip(points, points[1:], strict=False) if a != b)
+    assert all(b[0] > a[0] for a, b in pairwise(points) if a != b)
     assert all(-1e-9 <= level <= 1 + 1e-9 for _, level in points)
     for time in (0.0, width):
         assert level_at(points, time) == pytest.approx(0.5, abs=1e-6)

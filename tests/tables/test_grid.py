@@ -47,7 +47,7 @@ def test_a_delay_grid_lies_over_clock_slew_and_load_with_units(rows: list[Row]) 
         "long_name": "delay of Q fall from CK rise",
         "corner": "typical",
     }
-    assert (array.clock_slew.attrs["units"], array.load.attrs["units"]) == ("ps", "fF")
+    assert (array["clock_slew"].attrs["units"], array["load"].attrs["units"]) == ("ps", "fF")
     assert array.name == "clk_to_q"
     assert float(array.sel(clock_slew=50, load=5)) == 55.0
 
