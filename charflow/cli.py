@@ -9,12 +9,16 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from charflow import __version__
-from charflow.errors import CharflowError
+from charflow.errors import CharflowError, InputError
 
 if TYPE_CHECKING:
+    from charflow.campaign.beyond import Wish
     from charflow.campaign.run import RunResult
     from charflow.sheet import Sheet
     from charflow.tables.folder import Tables
+
+
+CHECKS = 4  # points between the grid that each table is checked at, unless the user says otherwise
 
 
 class _Commands(click.Group):
@@ -68,7 +72,7 @@ def demo(out: Path, workers: int | None) -> None:
     """
     from charflow.sheet.demo import demo_sheet
 
-    _run(demo_sheet(), out, workers, ())
+    _run(demo_sheet(), out, workers)
 
 
 @main.command()
@@ -76,17 +80,67 @@ def demo(out: Path, workers: int | None) -> None:
 @click.option("--out", type=click.Path(path_type=Path), required=True, help="Folder for store and tables.")
 @_workers_option
 @click.option("--corner", "corners", multiple=True, metavar="C", help="Only this corner; may be repeated.")
-def run(sheet: Path, out: Path, workers: int | None, corners: tuple[str, ...]) -> None:
+@click.option(
+    "--check",
+    type=click.IntRange(0, 1000),
+    default=CHECKS,
+    show_default=True,
+    metavar="N",
+    help="Points between the grid that each table is checked at; 0 for none.",
+)
+@click.option(
+    "--refine",
+    type=click.FloatRange(0, 100, min_open=True),
+    metavar="PCT",
+    help="Insert axis points until no check is off by more than PCT of a delay.",
+)
+@click.option(
+    "--insert",
+    type=click.IntRange(1, 100),
+    default=8,
+    show_default=True,
+    metavar="N",
+    help="Axis points that --refine may insert.",
+)
+@click.option("--timing", is_flag=True, help="Say where the time went, and keep it in timing.json.")
+def run(
+    sheet: Path,
+    out: Path,
+    workers: int | None,
+    corners: tuple[str, ...],
+    check: int,
+    refine: float | None,
+    insert: int,
+    timing: bool,
+) -> None:
     """Measure every point of a cell SHEET and write its tables into a folder.
 
     The same command goes on where an interrupted run stopped, and measures only what is missing.
 
+    Each table is checked at points between its own, which a timing tool has to interpolate: the error is
+    the table's accuracy. For setup and hold, --refine counts it in percent of the clock-to-output delay.
+
     Example: charflow run my_cell.toml --out run/
     """
-    _run(sheet, out, workers, corners)
+    if refine is not None and not check:
+        raise click.UsageError("--refine needs points to judge by: leave --check at 1 or more")
+    from charflow.campaign.beyond import Wish
+
+    wish = Wish(check, None if refine is None else refine / 100, insert)
+    _run(sheet, out, workers, corners, wish, timing)
 
 
-def _run(path: Path, out: Path, workers: int | None, corners: tuple[str, ...]) -> None:
+def _run(
+    path: Path,
+    out: Path,
+    workers: int | None,
+    corners: tuple[str, ...] = (),
+    wish: Wish | None = None,
+    timing: bool = False,
+) -> None:
+    import time
+
+    from charflow.campaign.beyond import Wish
     from charflow.campaign.run import run_campaign
     from charflow.progress import live
     from charflow.sheet import read_sheet
@@ -95,11 +149,19 @@ def _run(path: Path, out: Path, workers: int | None, corners: tuple[str, ...]) -
     sheet = read_sheet(path)
     text = _text_of(sheet)
     with live() as (tell, say):
-        result = run_campaign(sheet, out, _workers(workers), corners or None, tell, say)
+        result = run_campaign(sheet, out, _workers(workers), corners or None, tell, say, wish or Wish(CHECKS))
+    ended = time.monotonic()
     tables = tables_of(sheet, result)
     if result.answers:
-        write_tables(out, tables)
+        write_tables(out, tables, result.certificates)
         keep_sheet(out, text)
+    if timing and result.timing is not None:
+        from charflow.campaign.timing import text as timing_text
+        from charflow.tables.folder import write_timing
+
+        report = result.timing.report(ended, time.monotonic() - ended)
+        write_timing(out, report)
+        click.echo(timing_text(report), err=True)
     _report(sheet, result, tables, out)
 
 
@@ -110,6 +172,7 @@ def _text_of(sheet: Sheet) -> str:
 def _report(sheet: Sheet, result: RunResult, tables: Tables, out: Path) -> None:
     from rich.console import Console
 
+    from charflow.tables.certificate import print_certificate
     from charflow.tables.text import CAUTION, print_tables
 
     console = Console(soft_wrap=True, highlight=False)
@@ -117,6 +180,9 @@ def _report(sheet: Sheet, result: RunResult, tables: Tables, out: Path) -> None:
     for line in tables.conditions:
         click.echo(f"  {line}")
     print_tables(console, tables.rows)
+    print_certificate(console, tables.facts.get("certificate", ()))
+    for name, facts in tables.facts["corners"].items():
+        click.echo(f"{name}: {facts['models_proved']}")
     click.echo(
         f"{len(result.answers)} values, {result.failed} without an answer; "
         f"{result.transients} transients in {result.seconds:.1f} s. Written to {out}/"
@@ -133,13 +199,20 @@ def _report(sheet: Sheet, result: RunResult, tables: Tables, out: Path) -> None:
 @click.option(
     "--decks", type=click.Path(path_type=Path), metavar="DIR", help="Write transient decks into DIR."
 )
+@click.option(
+    "--against",
+    type=click.Path(path_type=Path),
+    metavar="DIR",
+    help="Say what a run into DIR would redo, and why.",
+)
 @click.option("--json", "as_json", is_flag=True, help="Print the plan as JSON.")
-def plan(sheet: Path, decks: Path | None, as_json: bool) -> None:
+def plan(sheet: Path, decks: Path | None, against: Path | None, as_json: bool) -> None:
     """Say what would be simulated for SHEET and about how long it takes; write decks on request.
 
     Each deck runs by itself: cd DIR, then ngspice -b NAME.cir, which prints clock-to-output delays.
+    With --against, a run folder is asked what it already holds; nothing in it is changed.
 
-    Example: charflow plan my_cell.toml --decks decks/
+    Example: charflow plan my_cell.toml --against run/
     """
     from charflow.sheet import read_sheet
 
@@ -151,12 +224,18 @@ def plan(sheet: Path, decks: Path | None, as_json: bool) -> None:
         from charflow.plan.decks import write_decks
 
         facts["decks"] = write_decks(read, decks)
+    text = "" if as_json else outline_text(facts)
+    if against is not None:
+        from charflow.campaign.redo import redo, redo_facts, redo_text
+
+        found = redo(read, against)
+        facts["redo"] = redo_facts(found)
+        text += "\n\n" + redo_text(found, against)
     if as_json:
         import json
 
-        click.echo(json.dumps(facts, indent=1))
-    else:
-        click.echo(outline_text(facts))
+        text = json.dumps(facts, indent=1)
+    click.echo(text)
 
 
 @main.command()
@@ -209,19 +288,35 @@ def draft(
 
 
 @main.command()
-@click.argument("folder", metavar="DIR", type=click.Path(path_type=Path))
+@click.argument("folders", metavar="DIR...", nargs=-1, required=True, type=click.Path(path_type=Path))
 @click.option(
     "--format",
     "form",
-    type=click.Choice(["text", "csv", "json", "markdown"]),
+    type=click.Choice(["text", "csv", "json", "markdown", "liberty"]),
     default="text",
     show_default=True,
 )
-def tables(folder: Path, form: str) -> None:
-    """Print the tables of a run folder.
+@click.option("--allow-gaps", is_flag=True, help="Liberty: leave tables with holes out, and say so.")
+@click.option(
+    "--out", type=click.Path(path_type=Path), metavar="FOLDER", help="Liberty: write NAME_CORNER.lib here."
+)
+def tables(folders: tuple[Path, ...], form: str, allow_gaps: bool, out: Path | None) -> None:
+    """Print the tables of a run folder, or write those of several as a Liberty library.
+
+    Liberty goes into files, one a corner: CELL_CORNER.lib in the run folder, or, where several folders make
+    one library, FOLDER/FOLDER_CORNER.lib.
 
     Example: charflow tables run/ --format csv > my_cell.csv
     """
+    if form == "liberty":
+        from charflow.tables.liberty.write import write_libraries
+
+        if write_libraries(folders, out, allow_gaps, click.echo):
+            sys.exit(1)
+        return
+    if len(folders) > 1 or out is not None or allow_gaps:
+        raise InputError("several folders, --out and --allow-gaps go with --format liberty only")
+    (folder,) = folders
     from charflow.tables.flat import to_csv
     from charflow.tables.folder import failures, read_tables, to_json
     from charflow.tables.text import print_tables, to_markdown
@@ -232,12 +327,81 @@ def tables(folder: Path, form: str) -> None:
     elif form == "json":
         click.echo(to_json(found), nl=False)
     elif form == "markdown":
-        click.echo(to_markdown(found.cell, found.conditions, found.rows))
+        click.echo(to_markdown(found.cell, found.conditions, found.rows, found.facts))
     else:
         from rich.console import Console
 
-        print_tables(Console(soft_wrap=True, highlight=False), found.rows)
+        from charflow.tables.certificate import print_certificate
+
+        console = Console(soft_wrap=True, highlight=False)
+        print_tables(console, found.rows)
+        print_certificate(console, found.facts.get("certificate", ()))
     if failures(found.rows):
+        sys.exit(1)
+
+
+@main.command()
+@click.argument("folder", metavar="DIR", type=click.Path(path_type=Path))
+@click.argument("key")
+def replay(folder: Path, key: str) -> None:
+    """Run the trial that decided one table entry again, in plain ngspice, and compare.
+
+    KEY is the entry's key, in the last column of tables.csv, or its first characters. The deck is written
+    to DIR/replay/KEY.cir; it brings the cell to rest by itself and measures with ngspice's own .measure.
+
+    Example: charflow replay run/ 3f9a2c
+    """
+    from charflow.tables.replay import replay as replay_entry
+    from charflow.tables.replay import words
+
+    for line in words(replay_entry(folder, key)):
+        click.echo(line)
+
+
+@main.command()
+@click.argument("old", type=click.Path(path_type=Path))
+@click.argument("new", type=click.Path(path_type=Path))
+@click.option("--limit", metavar="PCT", help='Exit status 1 beyond this change, such as "2%".')
+@click.option("--floor", default="10 ps", show_default=True, metavar="TIME", help="For small constraints.")
+@click.option("--worst", type=click.IntRange(0), default=10, show_default=True, help="Entries listed.")
+@click.option("--picture", type=click.Path(path_type=Path), metavar="FILE", help="Draw it: .svg or .png.")
+@click.option("--json", "as_json", is_flag=True, help="Print the comparison as JSON.")
+def compare(
+    old: Path, new: Path, limit: str | None, floor: str, worst: int, picture: Path | None, as_json: bool
+) -> None:
+    """Say what moved from OLD to NEW, each a run folder, a tables.csv or a Liberty file (.lib).
+
+    A change in % is relative to the size of the old value, and for setup, hold, recovery and removal, which
+    may be zero or negative, to the floor where that is larger. "Moved" is what the brackets of both values
+    do not explain. With --limit the exit status is 1 where a change is larger, or an old value has no
+    counterpart; values and points that are new do not count.
+
+    Example: charflow compare run_old/ run_new/ --limit 2% --picture change.svg
+    """
+    from charflow.tables.compare import compare as compared
+    from charflow.tables.liberty.side import read_sides
+    from charflow.tables.sides import floor_of, limit_of
+
+    most = None if limit is None else limit_of(limit)
+    sides = read_sides(old, new)
+    found = compared(sides[0].rows, sides[1].rows, floor_of(floor))
+    if picture is not None:
+        from charflow.show.change import draw_change
+
+        draw_change(picture, found, most, (sides[0].name, sides[1].name))
+    if as_json:
+        import json
+
+        from charflow.tables.compare_text import comparison_facts
+
+        click.echo(json.dumps(comparison_facts(*sides, found, most), indent=1))
+    else:
+        from rich.console import Console
+
+        from charflow.tables.compare_text import print_comparison
+
+        print_comparison(Console(soft_wrap=True, highlight=False), *sides, found, most, worst)
+    if most is not None and not found.within(most):
         sys.exit(1)
 
 

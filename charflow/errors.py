@@ -49,9 +49,19 @@ class CharflowError(Exception):
         return type(self)(self.message, where=(*self.where, place), todo=self.todo)
 
     def __str__(self) -> str:
-        place = ", ".join(reversed(self.where))
-        text = f"{place}: {self.message}" if place else self.message
-        return f"{text}\n  {self.todo}" if self.todo else text
+        place = visible(", ".join(reversed(self.where)))
+        message, todo = ("\n".join(map(visible, text.split("\n"))) for text in (self.message, self.todo))
+        text = f"{place}: {message}" if place else message
+        return f"{text}\n  {todo}" if todo else text
+
+
+def visible(text: str) -> str:
+    """Return ``text`` with what does not print (line ends, terminal commands) written as escapes."""
+    if text.isprintable():
+        return text
+    return "".join(
+        c if c.isprintable() else c.encode("unicode_escape", "backslashreplace").decode() for c in text
+    )
 
 
 def _rebuild(kind: type[CharflowError], message: str, where: tuple[str, ...], todo: str) -> CharflowError:

@@ -6,6 +6,7 @@ set -euo pipefail
 source "$(dirname -- "${BASH_SOURCE[0]}")/../decks/setup.sh"
 
 set_up 'charflow[test]'
+want_packages optional opensta yosys
 cd -- "$root"
 failed=()
 

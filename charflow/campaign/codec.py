@@ -95,7 +95,10 @@ def accuracy_to(accuracy: Accuracy) -> dict[str, Any]:
 
 def accuracy_from(raw: dict[str, Any]) -> Accuracy:
     """Return the settings that :func:`accuracy_to` wrote."""
-    settings = raw["settings"]
-    extra = tuple((name, value) for name, value in settings["extra"])
-    chosen = Settings(**{**settings, "extra": extra})
-    return Accuracy(**{**raw, "settings": chosen, "taught": row_from(raw["taught"])})
+    settings = settings_from(raw["settings"])
+    return Accuracy(**{**raw, "settings": settings, "taught": row_from(raw["taught"])})
+
+
+def settings_from(raw: dict[str, Any]) -> Settings:
+    """Return the settings whose fields are ``raw``."""
+    return Settings(**{**raw, "extra": tuple((name, value) for name, value in raw["extra"])})

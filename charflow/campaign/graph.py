@@ -6,9 +6,10 @@ the answers of the others as they are.
 
 from __future__ import annotations
 
+from collections.abc import Collection
 from dataclasses import dataclass
 
-from charflow.sheet import Sheet
+from charflow.sheet import Axes, Sheet
 from charflow.solve.order import ends_then_middles
 from charflow.solve.row import Group, groups_of
 
@@ -17,7 +18,8 @@ from charflow.solve.row import Group, groups_of
 class Node:
     """One job: its label, the labels of what must be done before it, and how often it was lost.
 
-    Without a ``group`` it prepares its corner. ``points`` counts the values it gives.
+    Without a ``group`` it prepares its corner, or proves its pruned models. ``points`` counts the values
+    it gives. With ``axes`` it solves columns of its own, not those of the sheet.
     """
 
     label: str
@@ -27,14 +29,21 @@ class Node:
     after: tuple[str, ...]
     points: int
     losses: int = 0
+    axes: Axes | None = None
+    proves: bool = False
 
 
-def nodes_of(sheet: Sheet, corners: tuple[str, ...]) -> list[Node]:
-    """Return the jobs of a run: one preparation a corner, then its rows, teachers before pupils."""
+def nodes_of(sheet: Sheet, corners: tuple[str, ...], unproved: Collection[str] = ()) -> list[Node]:
+    """Return the jobs of a run: one preparation a corner, then its rows, teachers before pupils.
+
+    At ``unproved`` corners the pruned models are compared with the whole library, beside all else.
+    """
     nodes = []
     for corner in corners:
         prepare = f"{corner}: preparing"
         nodes.append(Node(prepare, corner, None, 0.0, (), 0))
+        if corner in unproved:
+            nodes.append(Node(f"{corner}: proving models", corner, None, 0.0, (), 0, proves=True))
         for number, group in enumerate(groups_of(sheet)):
             slews, points = group.slews(sheet.axes), group.points(sheet.axes)
             for index, near in ends_then_middles(len(slews), last_first=True):

@@ -10,9 +10,11 @@ import multiprocessing
 import os
 import signal
 import threading
+import time
 from collections.abc import Callable
 from concurrent.futures import Future
 from contextlib import suppress
+from dataclasses import replace
 from multiprocessing import resource_tracker
 from multiprocessing.connection import Connection
 from multiprocessing.context import SpawnProcess
@@ -55,7 +57,9 @@ class LocalPool:
         self._journals = str(journals.absolute())
         self._jobs: SimpleQueue[tuple[Job, Future[Done]] | None] = SimpleQueue()
         self._stopping = threading.Event()
-        self._threads = [threading.Thread(target=self._serve, daemon=True) for _ in range(workers)]
+        self._threads = [
+            threading.Thread(target=self._serve, args=(seat,), daemon=True) for seat in range(workers)
+        ]
         self._lock = threading.Lock()
         self._alive: set[SpawnProcess] = set()
 
@@ -86,7 +90,7 @@ class LocalPool:
         for thread in self._threads:
             thread.join()
 
-    def _serve(self) -> None:
+    def _serve(self, seat: int) -> None:
         """Keep one worker busy. It dies with this thread, which therefore outlives it."""
         signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT, signal.SIGTERM})  # the worker inherits it
         worker: _Worker | None = None
@@ -96,8 +100,14 @@ class LocalPool:
                 future.cancel()
                 continue
             try:
+                asked = time.monotonic()
                 worker = worker or self._start()
-                future.set_result(worker.ask(job))
+                done = worker.ask(job)
+                spell = done.spell and replace(done.spell, asked=asked, seat=seat)
+                future.set_result(replace(done, spell=spell))
+                if job.full is not None:  # a whole library stays in memory as long as its process
+                    self._ended(worker)
+                    worker = None
             except WorkerLost as error:
                 future.set_exception(error)
                 self._ended(worker)

@@ -6,69 +6,40 @@ import hashlib
 import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import FIRST_COMPLETED, Future, wait
-from dataclasses import asdict, dataclass, field, replace
+from dataclasses import asdict, replace
 
 from charflow.campaign.codec import accuracy_from, accuracy_to, row_from, row_to
 from charflow.campaign.graph import Node, nodes_of
-from charflow.campaign.journal import Follower
 from charflow.campaign.pool import Pool, kill
-from charflow.campaign.store import Store
+from charflow.campaign.state import Campaign, ModelsDifferError, Progress
 from charflow.campaign.worker import Done, Job
 from charflow.errors import CharflowError, InputError, SimulatorError
-from charflow.plan.circuit import Circuit
 from charflow.probe.rest import Rest
-from charflow.sheet import Sheet
-from charflow.simulate.session import Clock
+from charflow.simulate.proof import Proof
 from charflow.solve.accuracy import Accuracy
+from charflow.solve.between import hints_at
 from charflow.solve.row import Group, RowResult, lost_row
+
+__all__ = ["Campaign", "ModelsDifferError", "Progress", "absorb", "drive"]
 
 TRIAL_LIMIT = 120.0  # s without a sign of life from a worker at work on a trial
 
 
-@dataclass
-class Progress:
-    """How far a run is; times in seconds. ``left`` is None until there is something to judge by."""
-
-    points: int = 0
-    points_total: int = 0
-    transients: int = 0
-    elapsed: float = 0.0
-    left: float | None = None
-    doing: str = ""
-
-
-@dataclass
-class Campaign:
-    """The state of a run: what it works on, and what it has so far."""
-
-    sheet: Sheet
-    corners: tuple[str, ...]
-    circuits: dict[str, Circuit]
-    store: Store
-    follower: Follower
-    version: int
-    tell: Callable[[Progress], None]
-    began: float = field(default_factory=time.monotonic)
-    progress: Progress = field(default_factory=Progress)
-    clock: Clock = field(default_factory=Clock)
-    rests: dict[str, Rest] = field(default_factory=dict)
-    accuracy: dict[str, Accuracy] = field(default_factory=dict)
-    rows: dict[str, RowResult] = field(default_factory=dict)
-    deaths: dict[str, int] = field(default_factory=dict)
-    row_keys: dict[str, str] = field(default_factory=dict)
-
-
 def drive(campaign: Campaign, make_pool: Callable[[], Pool], stopped: Callable[[], bool]) -> None:
     """Run the graph to its end. Raises :class:`KeyboardInterrupt` once ``stopped()``, between two steps."""
-    waiting = {node.label: node for node in nodes_of(campaign.sheet, campaign.corners)}
-    campaign.progress.points_total = sum(node.points for node in waiting.values())
-    for _ in _ready(campaign, waiting):
-        pass
-    if not waiting:
-        _tell(campaign)
-        return
+    waiting = _planned(campaign, campaign.first())
+    while True:
+        for _ in _ready(campaign, waiting):
+            pass
+        if waiting:
+            break
+        waiting = _planned(campaign, campaign.more(campaign.rows))
+        if not waiting:
+            _tell(campaign)
+            return
     running: dict[Future[Done], Node] = {}
     seen: dict[int, float] = {}
+    campaign.timing.pool = time.monotonic()
     with make_pool() as pool:
         while waiting or running:
             for node in _ready(campaign, waiting):
@@ -84,10 +55,24 @@ def drive(campaign: Campaign, make_pool: Callable[[], Pool], stopped: Callable[[
             _tell(campaign)
             if stopped():
                 raise KeyboardInterrupt
+            if not waiting and not running:
+                waiting = _planned(campaign, campaign.more(campaign.rows))
+
+
+def _planned(campaign: Campaign, nodes: list[Node]) -> dict[str, Node]:
+    campaign.progress.points_total += sum(node.points for node in nodes)
+    return {node.label: node for node in nodes}
 
 
 def absorb(campaign: Campaign, seen: dict[int, float] | None = None) -> None:
     """Move what the journals say into the store; note in ``seen`` when each process gave a sign of life."""
+    with campaign.timing.of("storing"):
+        items = _absorbed(campaign, seen)
+    if seen is not None:
+        campaign.progress.transients += items
+
+
+def _absorbed(campaign: Campaign, seen: dict[int, float] | None) -> int:
     items = []
     for process, event in campaign.follower.new():
         if seen is not None:
@@ -96,8 +81,26 @@ def absorb(campaign: Campaign, seen: dict[int, float] | None = None) -> None:
             items.append((event["key"], event["label"], event["trial"], event["outcome"]))
     if items:
         campaign.store.add_trials(items)
-    if seen is not None:
-        campaign.progress.transients += len(items)
+    return len(items)
+
+
+def recall(campaign: Campaign) -> list[tuple[Node, bool]]:
+    """Return every job of the run and whether the store has what came of it; nothing is run.
+
+    The rows of a corner whose preparation is not in the store are not there either.
+    """
+    found = []
+    for node in nodes_of(campaign.sheet, campaign.corners):
+        ready = node.group is None or node.corner in campaign.accuracy
+        found.append((node, ready and _from_store(campaign, node)))
+    return found
+
+
+def trials_kept(campaign: Campaign, corner: str) -> int:
+    """Return how many transients of this cell at ``corner`` the store has for the rows of the sheet."""
+    nodes = [node for node in nodes_of(campaign.sheet, campaign.corners) if node.corner == corner]
+    labels = {_trial_label(campaign, corner, node.group, node.clock_slew) for node in nodes}
+    return sum(len(campaign.store.outcomes(label)) for label in labels)
 
 
 def _ready(campaign: Campaign, waiting: dict[str, Node]) -> Iterator[Node]:
@@ -121,6 +124,11 @@ def _known(campaign: Campaign, label: str) -> bool:
 
 def _from_store(campaign: Campaign, node: Node) -> bool:
     key = _key(campaign, node)
+    if node.proves:
+        raw = campaign.store.get("meta", key)
+        if raw is not None:
+            _proved(campaign, node.corner, Proof(**raw))
+        return raw is not None
     if node.group is None:
         raw = campaign.store.get("corners", key)
         if raw is None:
@@ -138,7 +146,9 @@ def _key(campaign: Campaign, node: Node) -> str:
     """Return the store key of a node: a digest of everything its result follows from."""
     sheet = campaign.sheet
     facts = [campaign.circuits[node.corner].digest, str(campaign.version)]
-    if node.group is None:
+    if node.proves:
+        facts = ["proof", campaign.whole[node.corner].digest, *facts]
+    elif node.group is None:
         facts += [
             "prepare",
             repr(sheet.pins),
@@ -150,6 +160,7 @@ def _key(campaign: Campaign, node: Node) -> str:
         facts += [repr(campaign.circuits[node.corner].rest), repr(campaign.accuracy[node.corner])]
         facts += [repr(node.group), repr(node.clock_slew)]
         facts += [repr(sheet.axes), repr(sheet.measure)]
+        facts += [repr(node.axes)] if node.axes else []
         facts += [campaign.row_keys.get(label, "") for label in node.after]
     key = hashlib.sha256("\n".join(facts).encode()).hexdigest()[:32]
     campaign.row_keys[node.label] = key
@@ -171,7 +182,9 @@ def _job(campaign: Campaign, node: Node) -> Job:
     if node.group is not None:  # rows repeat some trials of the preparation
         known |= campaign.store.outcomes(_trial_label(campaign, node.corner))
     known_rows = [campaign.rows[name] for name in node.after if name in campaign.rows]
-    if node.corner in campaign.accuracy and node.clock_slew == campaign.sheet.axes.clock_slew[-1]:
+    if node.axes is not None:
+        known_rows = [hints_at(known_rows, node.clock_slew, node.axes.data_slew)]
+    elif node.corner in campaign.accuracy and node.clock_slew == campaign.sheet.axes.clock_slew[-1]:
         known_rows.append(campaign.accuracy[node.corner].taught)  # found while settings were chosen
     return Job(
         label=label,
@@ -184,6 +197,8 @@ def _job(campaign: Campaign, node: Node) -> Job:
         neighbours=tuple(known_rows),
         known=known,
         poisoned=frozenset(key for key, count in campaign.deaths.items() if count > 1),
+        axes=node.axes,
+        full=campaign.whole[node.corner] if node.proves else None,
         folder=str(campaign.store.path.parent.absolute()),
     )
 
@@ -199,6 +214,13 @@ def _settle(campaign: Campaign, node: Node, future: Future[Done]) -> bool:
     except Exception as error:
         return _lost(campaign, node, error)
     campaign.clock = campaign.clock + done.clock
+    if done.spell is not None:
+        campaign.timing.spells.append(done.spell)
+    if done.proof is not None:
+        if done.proof.difference is not None:
+            campaign.store.put("meta", campaign.row_keys[node.label], asdict(done.proof))
+        _proved(campaign, node.corner, done.proof)
+        return True
     key = campaign.row_keys[node.label]
     if done.prepared is not None and done.accuracy is not None:
         rest, accuracy = done.prepared.rest, done.accuracy
@@ -221,14 +243,24 @@ def _lost(campaign: Campaign, node: Node, error: Exception) -> bool:
         return False
     if node.losses < 2:
         return False
+    if node.proves:
+        _proved(campaign, node.corner, Proof(reason=f"as the worker process died twice on it ({error})"))
+        return True
     if node.group is None:
         raise SimulatorError(
             f"the worker process died twice while preparing corner {node.corner!r} ({error})",
             todo="Try charflow doctor; a model may crash ngspice.",
         )
     reason = f"the worker process died twice on this row ({error})"
-    _solved(campaign, node, lost_row(campaign.sheet, node.group, node.corner, node.clock_slew, reason))
+    row = lost_row(campaign.sheet, node.group, node.corner, node.clock_slew, reason, node.axes)
+    _solved(campaign, node, row)
     return True
+
+
+def _proved(campaign: Campaign, corner: str, proof: Proof) -> None:
+    campaign.proofs[corner] = proof
+    if proof.differs:
+        raise ModelsDifferError(corner)
 
 
 def _prepared(campaign: Campaign, corner: str, rest: Rest, accuracy: Accuracy) -> None:

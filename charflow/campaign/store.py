@@ -15,6 +15,7 @@ from pathlib import Path
 from typing import Any
 
 from charflow.campaign.codec import seal
+from charflow.campaign.migrate import bring_up, copied, create, is_new, schema_of
 from charflow.errors import FolderError
 
 FILE = "charflow.sqlite"
@@ -26,13 +27,13 @@ _COLUMNS = {
     "meta": ("name", "value"),
 }
 _TABLES = """
-CREATE TABLE IF NOT EXISTS trials (key TEXT PRIMARY KEY, label TEXT NOT NULL, trial TEXT NOT NULL,
+CREATE TABLE trials (key TEXT PRIMARY KEY, label TEXT NOT NULL, trial TEXT NOT NULL,
     outcome TEXT NOT NULL, seal TEXT NOT NULL) WITHOUT ROWID;
-CREATE INDEX IF NOT EXISTS trials_by_label ON trials (label);
-CREATE TABLE IF NOT EXISTS rows (key TEXT PRIMARY KEY, row TEXT NOT NULL, seal TEXT NOT NULL) WITHOUT ROWID;
-CREATE TABLE IF NOT EXISTS corners (
+CREATE INDEX trials_by_label ON trials (label);
+CREATE TABLE rows (key TEXT PRIMARY KEY, row TEXT NOT NULL, seal TEXT NOT NULL) WITHOUT ROWID;
+CREATE TABLE corners (
     key TEXT PRIMARY KEY, prepared TEXT NOT NULL, seal TEXT NOT NULL) WITHOUT ROWID;
-CREATE TABLE IF NOT EXISTS meta (
+CREATE TABLE meta (
     name TEXT PRIMARY KEY, value TEXT NOT NULL, seal TEXT NOT NULL) WITHOUT ROWID;
 """
 _TODO_WRITE = "Free some space, or check the permissions; then run the same command again to go on."
@@ -70,26 +71,18 @@ class Store:
 
     def _open(self) -> sqlite3.Connection:
         if self.readonly:
-            db = sqlite3.connect(f"{self.path.absolute().as_uri()}?mode=ro", uri=True)
+            # with all in the main file SQLite needs no others beside it, and the folder may be read-only
+            whole = not self.path.with_name(f"{FILE}-wal").exists()
+            address = f"{self.path.absolute().as_uri()}?mode=ro{'&immutable=1' if whole else ''}"
+            db = sqlite3.connect(address, uri=True)
         else:
             if self.path.is_file() and not self.path.stat().st_size:
                 raise sqlite3.DatabaseError("it is empty")
             db = sqlite3.connect(self.path)
         try:
-            version = db.execute("PRAGMA user_version").fetchone()[0]
             if db.execute("PRAGMA quick_check(1)").fetchone()[0] != "ok":
                 raise sqlite3.DatabaseError("its pages do not add up")
-            if version > SCHEMA:
-                raise FolderError(
-                    f"the store has schema {version}, this charflow knows up to {SCHEMA}",
-                    where=(str(self.path),),
-                    todo="Use the charflow that wrote it, or a newer one.",
-                )
-            if not self.readonly:
-                db.execute("PRAGMA journal_mode=WAL")
-                db.execute("PRAGMA synchronous=NORMAL")
-                db.executescript(_TABLES)
-                db.execute(f"PRAGMA user_version={SCHEMA}")
+            db = self._up_to_date(db)
             for table in _COLUMNS:
                 for _, sound in _entries(db, table):
                     if not sound:
@@ -97,6 +90,24 @@ class Store:
         except BaseException:
             db.close()
             raise
+        return db
+
+    def _up_to_date(self, db: sqlite3.Connection) -> sqlite3.Connection:
+        """Return the store with the schema of today: itself, or a copy in memory where it is only read."""
+        if self.readonly and schema_of(db) < SCHEMA:
+            with closing(db) as file:
+                db = copied(file)
+        try:
+            new = is_new(db)
+            if not new:
+                bring_up(db, SCHEMA)
+        except FolderError as error:
+            raise error.at(str(self.path)) from None
+        if not self.readonly:
+            db.execute("PRAGMA journal_mode=WAL")
+            db.execute("PRAGMA synchronous=NORMAL")
+            if new:
+                create(db, _TABLES, SCHEMA)
         return db
 
     def _set_aside(self) -> Path:
@@ -138,6 +149,11 @@ class Store:
         """Return trial and outcome (JSON values) of ``key``, or None."""
         found = self._db.execute("SELECT trial, outcome FROM trials WHERE key = ?", (key,)).fetchone()
         return (json.loads(found[0]), json.loads(found[1])) if found else None
+
+    def trials(self) -> Iterator[tuple[Any, Any]]:
+        """Yield trial and outcome (JSON values) of all that are kept."""
+        for trial, outcome in self._db.execute("SELECT trial, outcome FROM trials ORDER BY key"):
+            yield json.loads(trial), json.loads(outcome)
 
     def count_trials(self) -> int:
         """Return how many trials are kept."""

@@ -7,23 +7,28 @@ import hashlib
 import os
 import signal
 import tempfile
+import time
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
 from charflow.campaign.codec import outcome_from, outcome_to, trial_to
 from charflow.campaign.journal import Journal
+from charflow.campaign.timing import Spell
 from charflow.errors import FunctionError, TrialError, WorkerDied
 from charflow.plan.circuit import Circuit
 from charflow.plan.deck import Settings
+from charflow.plan.stimulus import Condition, ramp_time, relaxed
 from charflow.plan.trial import Outcome, Trial
 from charflow.probe.function import Mismatch
 from charflow.probe.picture import draw_mismatch
 from charflow.probe.prepare import Prepared, prepare
-from charflow.sheet import Sheet
+from charflow.sheet import Axes, Sheet
 from charflow.simulate.engine import Engine
+from charflow.simulate.proof import Proof, compare
 from charflow.simulate.session import Clock, Session
 from charflow.solve.accuracy import Accuracy, choose_settings
+from charflow.solve.reference import FIRST_WINDOW
 from charflow.solve.row import Group, RowResult, groups_of, solve_row
 
 
@@ -31,8 +36,10 @@ from charflow.solve.row import Group, RowResult, groups_of, solve_row
 class Job:
     """One piece of work, called ``name`` to people; its trials are kept under ``label``.
 
-    ``known`` are outcomes (JSON) by trial key, ``poisoned`` the keys of trials that killed workers.
-    ``folder`` takes the picture of a function that is not what the sheet says.
+    ``axes`` are the columns to solve, those of the sheet unless given. ``known`` are outcomes (JSON) by
+    trial key, ``poisoned`` the keys of trials that killed workers. ``folder`` takes the picture of a
+    function that is not what the sheet says. With ``full``, the circuit before its models were pruned,
+    the job is to compare the two; it leaves much memory behind.
     """
 
     label: str
@@ -46,11 +53,13 @@ class Job:
     known: dict[str, Any] = field(default_factory=dict)
     poisoned: frozenset[str] = frozenset()
     folder: str = ""
+    axes: Axes | None = None
+    full: Circuit | None = None
 
 
 @dataclass(frozen=True)
 class Done:
-    """What came of a job: a prepared corner or a solved row, and where the time went.
+    """What came of a job: a prepared corner, a solved row or proved models, and where the time went.
 
     Not ``whole`` where a trial was given up because it kills workers: then the next run shall try again.
     """
@@ -61,6 +70,8 @@ class Done:
     accuracy: Accuracy | None = None
     row: RowResult | None = None
     whole: bool = True
+    proof: Proof | None = None
+    spell: Spell | None = None
 
 
 def trial_key(circuit: Circuit, settings: Settings, version: int, trial: Trial) -> str:
@@ -129,32 +140,50 @@ def _engine(circuit: Circuit, settings: Settings) -> Engine:
     return _engines[identity]
 
 
+_written = [0.0]  # s spent on the journal
+
+
 def _say(**event: Any) -> None:
     if _journal is not None:
+        began = time.perf_counter()
         _journal.write(**event)
+        _written[0] += time.perf_counter() - began
 
 
 def work(job: Job) -> Done:
     """Do one job in this process."""
+    began, written = time.monotonic(), _written[0]
     _say(job=job.name)
     session = Session.here()
+    opened = time.monotonic() - began
     before = replace(session.clock)
-    if job.group is None or job.accuracy is None:
-        return _prepare(job, before)
-    bench = Bench(job, job.circuit, job.accuracy.settings)
+    if job.full is not None:
+        done = _prove(job, job.full, before)
+    elif job.group is None or job.accuracy is None:
+        done = _prepare(job, before)
+    else:
+        done = _solve(job, job.group, job.accuracy, before)
+    _say(done=job.name)
+    spell = Spell(os.getpid(), began, time.monotonic(), opened, _written[0] - written, done.clock)
+    return replace(done, spell=spell)
+
+
+def _solve(job: Job, group: Group, accuracy: Accuracy, before: Clock) -> Done:
+    """Solve a row."""
+    bench = Bench(job, job.circuit, accuracy.settings)
     row = solve_row(
         bench,
         lambda: len(bench.needed),
         bench.key_of,
         job.sheet,
-        job.group,
+        group,
         job.circuit.corner,
         job.clock_slew,
         job.neighbours,
-        (job.accuracy.delay_share, job.accuracy.constraint),
+        (accuracy.delay_share, accuracy.constraint),
+        job.axes,
     )
-    _say(done=job.name)
-    return Done(job.name, session.clock - before, row=row, whole=bench.whole)
+    return Done(job.name, Session.here().clock - before, row=row, whole=bench.whole)
 
 
 def _shown(job: Job, mismatch: Mismatch) -> FunctionError:
@@ -182,5 +211,15 @@ def _prepare(job: Job, before: Clock) -> Done:
     accuracy = choose_settings(
         lambda settings: Bench(job, rested, settings), job.sheet, groups_of(job.sheet), rested.corner
     )
-    _say(done=job.name)
     return Done(job.name, Session.here().clock - before, prepared, accuracy)
+
+
+def _prove(job: Job, full: Circuit, before: Clock) -> Done:
+    """Compare the pruned models with the whole library on one relaxed trial."""
+    axes = job.sheet.axes
+    middle = (axes.clock_slew[len(axes.clock_slew) // 2], axes.data_slew[len(axes.data_slew) // 2])
+    arc = groups_of(job.sheet)[0].arcs[0]
+    condition = Condition(job.circuit.corner, *middle, axes.constraint_load)
+    until = FIRST_WINDOW + ramp_time(max(middle), job.circuit.fractions)
+    proof = compare(full, job.circuit, relaxed(job.sheet, arc, condition, until))
+    return Done(job.name, Session.here().clock - before, proof=proof)

@@ -17,6 +17,7 @@ from charflow.sheet import Role, Sheet
 from charflow.sheet.logic import Bit, Logic, parse_logic
 
 STATE = "state"
+MOST_LEVELS = 12  # inputs and stored bits: the arcs of 12 take seconds to derive, each one more doubles that
 Bits = tuple[Bit, ...]
 
 
@@ -156,6 +157,12 @@ def _behaviour_of(sheet: Sheet) -> Behaviour:
     control = controls[0]
     transparent = sheet.pins[control].role is Role.GATE
     next_state = _next_state(sheet)
+    if len(sheet.inputs) + len(next_state) > MOST_LEVELS:
+        raise SheetError(
+            f"pins: {len(sheet.inputs)} inputs and {len(next_state)} stored bits; "
+            f"at most {MOST_LEVELS} together can be worked through",
+            todo="Every combination of their levels is tried; describe a register of fewer bits.",
+        )
     outputs = tuple(
         (pin, _logic(f"pins.{pin}.shows", sheet.pins[pin].shows or STATE)) for pin in sheet.outputs
     )

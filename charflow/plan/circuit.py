@@ -25,7 +25,7 @@ class Circuit:
     """Everything about a cell at a corner that no trial changes.
 
     ``rest`` [s] is how long each vector of a start is held; ``models`` and ``netlist`` are SPICE text;
-    ``digest`` identifies their content, comments and layout aside.
+    ``digest`` identifies their content, comments and layout aside; ``parts`` are what it is made of, by name.
     """
 
     corner: str
@@ -43,6 +43,7 @@ class Circuit:
     grounds: tuple[str, ...]
     fractions: tuple[float, float]
     digest: str
+    parts: tuple[tuple[str, str], ...] = ()
     rest: float = 4e-9
 
     def rested(self, rest: float) -> Circuit:
@@ -155,12 +156,13 @@ def circuit_of(sheet: Sheet, sources: Sources, corner: str, *, pruned: bool = Tr
         fractions=sheet.measure.slew_fractions,
         digest="",
     )
-    facts = (
-        fingerprint(models),
-        fingerprint(sources.netlist),
-        *(repr(getattr(circuit, name)) for name in _DECIDING),
+    parts = (
+        ("models", fingerprint(models)),
+        ("netlist", fingerprint(sources.netlist)),
+        *((name, repr(getattr(circuit, name))) for name in _DECIDING),
     )
-    return replace(circuit, digest=hashlib.sha256("\n".join(facts).encode()).hexdigest())
+    text = "\n".join(part for _, part in parts)
+    return replace(circuit, digest=hashlib.sha256(text.encode()).hexdigest(), parts=parts)
 
 
 _DECIDING = (
@@ -171,6 +173,8 @@ _DECIDING = (
     "subckt",
     "ports",
     "inputs",
+    "outputs",
     "powers",
+    "grounds",
     "fractions",
 )

@@ -120,7 +120,7 @@ def waveform(trial: Trial, pin: str, fractions: tuple[float, float]) -> Waveform
         half = ramp_time(move.slew, fractions) / 2
         t0, t1 = move.at - half, move.at + half
         v0, v1 = (0.0, 1.0) if move.rising else (1.0, 0.0)
-        if ramp is not None and t0 < ramp[1]:
+        if ramp is not None and t0 < ramp[1] and v0 != ramp[2]:
             points[-1] = _meeting(ramp, (t0, t1, v0, v1))
         else:
             points.append((t0, v0))

@@ -16,7 +16,7 @@ from charflow.plan.circuit import circuit_of, read_sources
 from charflow.probe.axes import DraftAxes, axes_by_simulation, axes_from_sizes
 from charflow.probe.draft_text import DOUBT, MISSING, Findings, ModelChoice, Proof, sheet_text
 from charflow.probe.explore import explore
-from charflow.probe.function import check_function
+from charflow.probe.function import Mismatch, check_function
 from charflow.probe.infer import infer
 from charflow.probe.pins import find_ports
 from charflow.probe.rest import shortest_working
@@ -189,7 +189,10 @@ def _proved(sheet: Sheet, say: Say) -> tuple[DraftAxes, Proof]:
     def works(rest: float) -> int:
         say(f"proving the function by simulation, each vector held for {rest * 1e9:g} ns")
         engine = Engine(circuit.rested(rest))
-        return check_function(engine.run, cell, sheet, CORNER, until=rest)
+        try:
+            return check_function(engine.run, cell, sheet, CORNER, until=rest)
+        except Mismatch as mismatch:
+            raise mismatch.error from None
 
     try:
         rest, count = shortest_working(works)

@@ -17,6 +17,7 @@ from charflow.errors import SheetError
 _TOKEN = re.compile(r"\s*(?:([A-Za-z_][\w.$\[\]<>]*)|([01])|([!'()&|^?:*+]))")
 _MAX_LENGTH = 10_000
 _MAX_DEPTH = 60
+_MAX_TOKENS = 400  # each may make the tree one deeper
 
 Bit = bool | None
 
@@ -28,6 +29,11 @@ class Logic:
     text: str
     names: tuple[str, ...]
     _tree: tuple[object, ...]
+
+    @property
+    def tree(self) -> tuple[object, ...]:
+        """The parsed tree: ``name``, ``const``, ``not``, ``and``, ``or``, ``xor`` or ``choose``, then operands."""
+        return self._tree
 
     def value(self, levels: Mapping[str, Bit]) -> Bit:
         """Return the value under ``levels``; None where it depends on an unknown level."""
@@ -78,7 +84,8 @@ class _Parser:
         self.names: list[str] = []
         self.tokens: list[tuple[str, int]] = []
         place = 0
-        while text[place:].strip():
+        end = len(text.rstrip())
+        while place < end:
             match = _TOKEN.match(text, place)
             if match is None:
                 skip = len(text[place:]) - len(text[place:].lstrip())
@@ -86,6 +93,8 @@ class _Parser:
             token = match.group(1) or match.group(2) or match.group(3)
             self.tokens.append((token, match.end() - len(token)))
             place = match.end()
+            if len(self.tokens) > _MAX_TOKENS:
+                raise SheetError(f"the expression has more than {_MAX_TOKENS} names and operators")
         self.at = 0
 
     def _error(self, place: int, why: str) -> SheetError:

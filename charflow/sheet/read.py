@@ -15,6 +15,7 @@ from charflow.errors import SheetError
 from charflow.sheet.schema import Axes, Cell, Corner, Measure, Pin, Role, Sheet
 
 _MAX_BYTES = 1_000_000
+_MAX_DOTS = 300  # in a line; reading a key of thousands of parts takes gigabytes
 _TABLES: dict[str, type[BaseModel]] = {
     "cell": Cell,
     "pins": Pin,
@@ -33,6 +34,9 @@ def read_sheet(path: Path | str) -> Sheet:
     """
     path = Path(path)
     text = _read_text(path)
+    for number, line in enumerate(text.splitlines(), start=1):
+        if line.count(".") > _MAX_DOTS and not line.lstrip().startswith("#"):
+            raise SheetError("this nests too deeply to be a sheet", where=(f"{path}:{number}",))
     try:
         raw = tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
@@ -100,7 +104,12 @@ def expand(text: str) -> str:
 
 
 def _absolute(text: str, folder: Path) -> str:
-    return os.path.normpath(folder.absolute() / Path(expand(text)).expanduser())
+    path = Path(expand(text))
+    try:
+        path = path.expanduser()
+    except RuntimeError:
+        raise SheetError(f"{text!r} names the home folder of a user there is not") from None
+    return os.path.normpath(folder.absolute() / path)
 
 
 def _with_paths(table: dict[str, Any], keys: tuple[str, ...], folder: Path) -> dict[str, Any]:
@@ -131,7 +140,7 @@ def _with_models(corner: Any, folder: Path) -> Any:
 def _explain(error: ValidationError, path: Path, text: str) -> SheetError:
     """Turn the first of pydantic's complaints into one sentence about the user's own line."""
     first = error.errors(include_url=False)[0]
-    loc = tuple(str(part) for part in first["loc"] if part != "path")
+    loc = tuple(str(part) for part in first["loc"])
     model = _TABLES.get(loc[0]) if loc else None
     key = loc[-1] if loc else ""
     kind = first["type"]

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import re
 from enum import StrEnum
 from itertools import pairwise
@@ -112,6 +113,15 @@ class Corner(_Strict):
     temperature: Celsius = Field(ge=-273, le=500)
     compatibility: str | None = Field(default=None, pattern=r"^[a-z]{2,12}$")
     options: dict[str, float] = {}
+
+    @model_validator(mode="after")
+    def _plain_options(self) -> Self:
+        for name, value in self.options.items():
+            if not re.fullmatch(r"[A-Za-z]\w{0,30}", name):
+                raise ValueError(f"options: {name!r} is not the name of a SPICE option")
+            if not math.isfinite(value):
+                raise ValueError(f"options.{name} must be a finite number, found {value}")
+        return self
 
 
 def _ascending(values: tuple[float, ...], what: str) -> None:

@@ -5,13 +5,14 @@ from __future__ import annotations
 import re
 import subprocess
 import tempfile
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 
 from charflow.errors import LoadError, SimulatorError, TrialTimeout
 from charflow.plan.circuit import Circuit
-from charflow.plan.deck import Settings, deck, span
+from charflow.plan.deck import Settings, deck, nudged, span
 from charflow.plan.trial import Outcome, Trial
 from charflow.simulate.library import environment, find_executable, private_folder
 from charflow.simulate.messages import load_error, run_error
@@ -48,11 +49,9 @@ def run_deck(text: str, compatibility: str | None, limit: float = 600.0) -> tupl
             raise SimulatorError(f"{executable} does not run: {error}") from None
         said = done.stdout + done.stderr
         raw = folder / "trial.raw"
-        if not raw.exists():
+        if not raw.exists() or b"Binary:\n" not in raw.read_bytes():
             lines = said.splitlines()
-            loaded = "No. of Data" in said or re.search(
-                "singular|timestep|operating point", said, re.IGNORECASE
-            )
+            loaded = raw.exists() or re.search("singular|timestep|operating point", said, re.IGNORECASE)
             raise run_error(lines) if loaded else load_error(lines)
         return read_raw(raw), said
 
@@ -91,7 +90,8 @@ def run_batch(
     circuit: Circuit, trial: Trial, settings: Settings, rest_volts: dict[str, float] | None = None
 ) -> Outcome:
     """Return what ``trial`` shows in the ngspice executable, cold or, with ``rest_volts`` [V], warm."""
-    text = deck(circuit, trial, settings, rest_volts)
+    trial = nudged(trial, settings)
+    text = deck(circuit, trial, replace(settings, nudge=0.0), rest_volts)
     waves, said = run_deck(text, circuit.compatibility)
     at = span(circuit, trial, settings, warm=rest_volts is not None)
     if waves["time"][-1] < at.stop * (1 - 1e-6):

@@ -8,6 +8,7 @@ is current: a deck that fails to load otherwise leaves the circuit before it in 
 from __future__ import annotations
 
 import logging
+import math
 import os
 import time
 from collections import OrderedDict
@@ -23,6 +24,18 @@ from charflow.simulate.library import find_library, private_folder
 from charflow.simulate.messages import load_error, run_error
 from charflow.simulate.waveform import Samples
 
+DEFAULTS = {  # of ngspice 39, for options that settings set once and then leave out
+    "reltol": "0.001",
+    "abstol": "1e-12",
+    "vntol": "1e-06",
+    "chgtol": "1e-14",
+    "trtol": "7",
+    "gmin": "1e-12",
+    "itl4": "10",
+    "method": "trap",
+    "maxord": "2",
+    "bypass": "0",
+}
 MAX_CIRCUITS = 48  # loaded at a time; the least recently used goes first
 
 
@@ -75,6 +88,7 @@ class Session:
         self._current: Loaded | None = None
         self._compatibility: str | None = None
         self._serial = 0
+        self._broken = ""
         self.command("set num_threads=1")
         self.command("set ng_nomodcheck")
 
@@ -100,6 +114,11 @@ class Session:
 
         Raises :class:`LoadError` with the cause in one line; then no circuit is current.
         """
+        if self._broken:
+            raise SimulatorError(
+                f"this process's ngspice was left unusable by an earlier deck ({self._broken})",
+                todo="Correct that deck and start again.",
+            )
         began = time.perf_counter()
         self._forget_oldest()
         self._serial += 1
@@ -115,6 +134,9 @@ class Session:
         except NameError:
             pass
         said = [*self._shared._stdout, *self._shared._stderr]
+        if any("cannot recover" in line for line in said):
+            self._broken = load_error(said).message  # touching the library again may end the process
+            raise load_error(said)
         if self._titles().get(title) is not True:
             raise load_error(said)
         self._current = self._circuits[key] = Loaded(title, compatibility)
@@ -149,7 +171,8 @@ class Session:
             if circuit.loads.get(name) != text:
                 self.command(f"alter {name} = {text}")
                 circuit.loads[name] = text
-        for name, value in options.items():
+        left = {name: DEFAULTS[name] for name in circuit.options if name not in options}
+        for name, value in {**left, **options}.items():
             if circuit.options.get(name) != value:
                 self.command(f"option {name}={value}")
                 circuit.options[name] = value
@@ -179,6 +202,26 @@ class Session:
             if wrong:
                 raise run_error([*said, f"no finite values for node {wrong[0]}"])
             return vectors
+        finally:
+            self.command("destroy all")
+
+    def operating_point(self) -> dict[str, float]:
+        """Return node voltages [V] and source currents [A] of the current circuit at its DC operating point.
+
+        Raises :class:`TrialError` where ngspice finds none.
+        """
+        if self._current is None:
+            raise LoadError("no circuit is loaded")
+        self._save(self._current, ())
+        said = self.command("op")
+        try:
+            name = self._shared.last_plot
+            if not name.startswith("op"):
+                raise run_error(said)
+            values = {k.lower(): float(v._data[-1]) for k, v in self._shared.plot(None, name).items()}
+            if not all(map(math.isfinite, values.values())):
+                raise run_error([*said, "no finite operating point"])
+            return values
         finally:
             self.command("destroy all")
 
@@ -222,8 +265,11 @@ def _open_library() -> Any:
 
         NgSpiceShared.LIBRARY_PATH = library
         return NgSpiceShared.new_instance()
-    except OSError as error:
-        raise SimulatorError(f"the ngspice library {library!r} does not load: {error}") from None
+    except (OSError, AttributeError) as error:
+        raise SimulatorError(
+            f"the library {library!r} does not load as libngspice: {error}",
+            todo="Check NGSPICE_LIBRARY_PATH, or install libngspice0.",
+        ) from None
     finally:
         os.chdir(before)
         if kept is None:

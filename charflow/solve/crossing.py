@@ -159,6 +159,7 @@ class Search:
         if again.passes(self.limit):
             return True
         self.samples[self.samples.index(passes)] = again
+        self.measure = self.confirm  # from here on every sample is watched that long
         return False
 
     def _walk(self) -> None:

@@ -13,8 +13,8 @@ def ends_then_middles(count: int, *, last_first: bool) -> list[tuple[int, tuple[
 
     The first one needs nothing, the second the first, every other one its two solved neighbours.
     """
-    if count == 1:
-        return [(0, ())]
+    if count < 2:
+        return [(0, ())] * count
     first, second = (count - 1, 0) if last_first else (0, count - 1)
     order: list[tuple[int, tuple[int, ...]]] = [(first, ()), (second, (first,))]
     gaps = [(0, count - 1)]

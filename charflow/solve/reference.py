@@ -25,8 +25,11 @@ def reference(evaluate: Evaluate, sheet: Sheet, arc: Arc, condition: Condition) 
     slews = (condition.clock_slew or 0.0, condition.data_slew or 0.0)
     until = FIRST_WINDOW + ramp_time(max(slews), sheet.measure.slew_fractions) / 2
     while True:
+        outcome = evaluate(relaxed(sheet, arc, condition, until))
+        for pin, rising in arc.observed:
+            begins_at_rest(outcome.of(pin), rising)
         try:
-            return _read(arc, evaluate(relaxed(sheet, arc, condition, until)), until, sheet.measure.glitch)
+            return _read(arc, outcome, until, sheet.measure.glitch)
         except _StaysError:
             return _scaled(evaluate, sheet, arc, condition, until)
         except (NotSettled, TrialError) as error:
@@ -47,7 +50,6 @@ def _read(arc: Arc, outcome: Outcome, until: float, glitch: float) -> Reference:
     transitions: dict[str, float] = {}
     for pin, rising in arc.observed:
         swing = outcome.of(pin)
-        begins_at_rest(swing, rising)
         delay = delay_of(swing, rising)
         if delay is None:
             edge = f"{arc.related} {'rises' if arc.related_rising else 'falls'}"

@@ -139,25 +139,31 @@ def solve_row(
     clock_slew: float,
     neighbours: Sequence[RowResult] = (),
     converged: tuple[float, float] = (0.0, 0.0),
+    axes: Axes | None = None,
 ) -> RowResult:
-    """Return every answer of one row.
+    """Return every answer of one row, over the columns of ``axes`` (those of the sheet unless given).
 
     ``ran()`` counts transients run so far, ``key_of`` names a trial; ``neighbours`` are rows already
     solved that say something of this one. ``converged`` is what the settings leave uncertain: of delays as
     a fraction, of constraints in seconds; it widens the brackets. A point that cannot be measured has no value and its reason as status.
     """
-    solver = _Row(evaluate, ran, key_of, sheet, group, corner, clock_slew, tuple(neighbours), converged)
+    asked = axes or sheet.axes
+    solver = _Row(
+        evaluate, ran, key_of, sheet, group, corner, clock_slew, tuple(neighbours), converged, asked
+    )
     answers = [*solver.delays(), *solver.constraints(), *solver.widths()]
     return RowResult(clock_slew, tuple(answers), solver.hints)
 
 
-def lost_row(sheet: Sheet, group: Group, corner: str, clock_slew: float, reason: str) -> RowResult:
+def lost_row(
+    sheet: Sheet, group: Group, corner: str, clock_slew: float, reason: str, axes: Axes | None = None
+) -> RowResult:
     """Return the row in which no point has an answer, each for the same ``reason``."""
 
     def evaluate(trial: Trial) -> Outcome:
         raise TrialError(reason)
 
-    return solve_row(evaluate, lambda: 0, lambda trial: "", sheet, group, corner, clock_slew)
+    return solve_row(evaluate, lambda: 0, lambda trial: "", sheet, group, corner, clock_slew, axes=axes)
 
 
 @dataclass
@@ -171,13 +177,14 @@ class _Row:
     clock_slew: float
     neighbours: tuple[RowResult, ...]
     converged: tuple[float, float]
+    axes: Axes
     hints: dict[tuple[Question, float], Hint] = field(default_factory=dict)
 
     def delays(self) -> list[Answer]:
         """Return delay and transition of each output over the load axis."""
         answers: list[Answer] = []
         for arc in self.group.delays:
-            for load in self.sheet.axes.load:
+            for load in self.axes.load:
                 answers += self._delay(arc, self._condition(arc, load))
         return answers
 
@@ -209,11 +216,11 @@ class _Row:
 
     def constraints(self) -> list[Answer]:
         """Return setup, hold, recovery and removal of each arc over the data slew axis."""
-        slews = self.sheet.axes.data_slew
+        slews = self.axes.data_slew
         order = [index for index, _ in ends_then_middles(len(slews), last_first=False)]
         found: dict[tuple[int, int, int], Answer] = {}
         for number, arc in enumerate(self.group.constraints):
-            for row, load in enumerate(self.sheet.axes.loads_of_constraints):
+            for row, load in enumerate(self.axes.loads_of_constraints):
                 for index in order:
                     found[number, row, index] = self._constraint(
                         arc, self._condition(arc, load, slews[index])
@@ -225,7 +232,7 @@ class _Row:
         return [
             self._constraint(arc, self._condition(arc, load))
             for arc in self.group.widths
-            for load in self.sheet.axes.loads_of_constraints
+            for load in self.axes.loads_of_constraints
         ]
 
     def _constraint(self, arc: Arc, condition: Condition) -> Answer:

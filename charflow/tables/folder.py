@@ -15,10 +15,14 @@ from charflow.campaign.run import RunResult
 from charflow.errors import FolderError
 from charflow.sheet import Sheet
 from charflow.sheet.units import Unit, show
+from charflow.solve.certificate import Certificate
+from charflow.tables.certificate import facts_of, refinement_facts, refinement_words
+from charflow.tables.certificate import to_csv as certificate_csv
 from charflow.tables.flat import Row, row_from, row_of, to_csv
 from charflow.tables.text import CAUTION, to_markdown
 
 FORMAT = 1
+MAX_BYTES = 32 * 2**20  # of a file with tables; one of 2,000 values has one
 
 
 @dataclass(frozen=True)
@@ -45,7 +49,7 @@ def tables_of(sheet: Sheet, result: RunResult) -> Tables:
         if any(row.corner == name for row in rows)
     }
     low, high = sheet.measure.slew_fractions
-    facts = {
+    facts: dict[str, Any] = {
         "charflow": __version__,
         "ngspice": result.version,
         "corners": corners,
@@ -53,14 +57,24 @@ def tables_of(sheet: Sheet, result: RunResult) -> Tables:
         "slew_fractions": [low, high],
         "constraint_load_ff": sheet.axes.constraint_load * 1e15,
     }
+    if result.certificates:
+        facts["certificate"] = facts_of(result.certificates)
+    if result.refinement is not None:
+        facts["refinement"] = refinement_facts(result.refinement)
     name = sheet.cell.subckt or sheet.cell.netlist.stem
-    return Tables(name, tuple(_conditions(sheet, corners)), facts, rows)
+    conditions = _conditions(sheet, corners)
+    if "refinement" in facts:
+        conditions.append(refinement_words(facts["refinement"]))
+    return Tables(name, tuple(conditions), facts, rows)
 
 
 def _proved(result: RunResult, corner: str) -> dict[str, Any]:
     """Return what preparing a corner showed: rest, settings, and what they leave uncertain."""
     rest, accuracy = result.rests[corner], result.accuracy[corner]
+    proof = result.proofs.get(corner)
     return {
+        "models_proved": proof.words if proof else "pruned models: not compared, the run was cut short",
+        "bench": result.benches[corner],
         "rest_s": rest.seconds,
         "rest_doubled_moved": rest.moved,
         "flips_checked": rest.flips,
@@ -89,16 +103,28 @@ def _conditions(sheet: Sheet, corners: dict[str, Any]) -> list[str]:
     return lines
 
 
-def write_tables(folder: Path, tables: Tables) -> None:
-    """Write ``tables.csv``, ``tables.json`` and ``tables.md`` into ``folder``, each whole or not at all."""
-    _replace(folder / "tables.csv", to_csv(tables.rows))
-    _replace(folder / "tables.json", to_json(tables))
-    _replace(folder / "tables.md", to_markdown(tables.cell, tables.conditions, tables.rows))
+def write_tables(folder: Path, tables: Tables, certificates: Sequence[Certificate] = ()) -> None:
+    """Write ``tables.csv``, ``tables.json`` and ``tables.md`` into ``folder``, each whole or not at all.
+
+    With ``certificates`` there is ``certificate.csv`` too; else one of an earlier run is removed.
+    """
+    write_whole(folder / "tables.csv", to_csv(tables.rows))
+    write_whole(folder / "tables.json", to_json(tables))
+    write_whole(folder / "tables.md", to_markdown(tables.cell, tables.conditions, tables.rows, tables.facts))
+    if certificates:
+        write_whole(folder / "certificate.csv", certificate_csv(certificates))
+    else:
+        (folder / "certificate.csv").unlink(missing_ok=True)
+
+
+def write_timing(folder: Path, report: dict[str, Any]) -> None:
+    """Write ``timing.json``."""
+    write_whole(folder / "timing.json", json.dumps(report, indent=1) + "\n")
 
 
 def keep_sheet(folder: Path, text: str) -> None:
     """Write the copy of the sheet, as it was read, into the run folder."""
-    _replace(folder / "sheet.toml", text)
+    write_whole(folder / "sheet.toml", text)
 
 
 def to_json(tables: Tables) -> str:
@@ -118,7 +144,11 @@ def read_tables(folder: Path) -> Tables:
     """Return the tables of a run folder. Raises :class:`FolderError` where there are none."""
     path = folder / "tables.json"
     try:
-        raw = json.loads(path.read_text(encoding="utf-8"))
+        with path.open("rb") as file:
+            content = file.read(MAX_BYTES + 1)
+        if len(content) > MAX_BYTES:
+            raise FolderError(f"the file is larger than {MAX_BYTES / 1e6:.0f} MB", where=(str(path),))
+        raw = json.loads(content.decode("utf-8"))
         if raw["format"] != FORMAT:
             raise FolderError(
                 f"tables of format {raw['format']!r}, this charflow reads {FORMAT}", where=(str(path),)
@@ -137,7 +167,8 @@ def read_tables(folder: Path) -> Tables:
         raise FolderError(f"the tables cannot be read: {error.strerror}", where=(str(path),)) from None
 
 
-def _replace(path: Path, text: str) -> None:
+def write_whole(path: Path, text: str) -> None:
+    """Write ``text`` to ``path``, whole or not at all. Raises :class:`FolderError` where it cannot."""
     part = path.with_name(f".{path.name}.part")
     try:
         part.write_text(text, encoding="utf-8")

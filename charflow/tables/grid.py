@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from dataclasses import dataclass
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 from charflow.tables.flat import Row
@@ -85,6 +85,40 @@ def grids_of(rows: Iterable[Row]) -> list[Grid]:
         tables.setdefault(key, {})[points] = row
     several = {key[:-1] for key in tables if sum(other[:-1] == key[:-1] for other in tables) > 1}
     return [_grid(cells, key[:-1] in several) for key, cells in tables.items()]
+
+
+def worst_of(grids: Sequence[Grid]) -> list[Grid]:
+    """Return, for each constraint measured under several side conditions, the grid of its worst case.
+
+    Worst is the largest value: the longest time data must be there. A point without an answer under any
+    condition has none here.
+    """
+    families: dict[tuple[object, ...], list[Grid]] = {}
+    for grid in grids:
+        first = next(iter(grid.cells.values()))
+        if first.pin and first.when:
+            load = first.load_ff if "load" not in (grid.row, grid.column) else None
+            key = (
+                grid.corner,
+                grid.quantity,
+                first.pin,
+                first.pin_edge,
+                first.output,
+                first.output_edge,
+                load,
+            )
+            families.setdefault(key, []).append(grid)
+    return [_worst(family) for family in families.values() if len(family) > 1]
+
+
+def _worst(family: list[Grid]) -> Grid:
+    cells: dict[tuple[float, float], Row] = {}
+    for point in family[0].cells:
+        rows = [grid.cells[point] for grid in family if point in grid.cells]
+        holes = [row for row in rows if row.value_ps is None]
+        cells[point] = holes[0] if holes else max(rows, key=lambda row: row.value_ps or 0.0)
+    title = family[0].title.partition(" when ")[0]
+    return replace(family[0], title=f"{title}, worst of {len(family)} side conditions", cells=cells)
 
 
 def _axes(row: Row) -> tuple[tuple[str, str], tuple[float, float]]:

@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import html
 import re
-from collections.abc import Sequence
-from typing import TYPE_CHECKING
+from collections.abc import Mapping, Sequence
+from typing import TYPE_CHECKING, Any
 
+from charflow.tables.certificate import to_markdown as certificate_lines
 from charflow.tables.flat import Row
-from charflow.tables.grid import Grid, axis_unit, grids_of
+from charflow.tables.grid import Grid, axis_unit, grids_of, worst_of
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -34,11 +35,16 @@ def _corner_cell(grid: Grid) -> str:
     return f"{down} \\ {words[grid.column]}"
 
 
-def to_markdown(cell: str, conditions: Sequence[str], rows: Sequence[Row]) -> str:
-    """Return a document with a table a grid; ``conditions`` are lines about corners and definitions."""
+def to_markdown(
+    cell: str, conditions: Sequence[str], rows: Sequence[Row], facts: Mapping[str, Any] | None = None
+) -> str:
+    """Return a document with a table a grid; ``conditions`` are lines about corners and definitions.
+
+    ``facts`` are those of the tables: with a certificate in them, it follows.
+    """
     lines = [f"# {_plain(cell)}", "", *[f"- {_plain(text)}" for text in conditions], "", CAUTION, ""]
     corner = None
-    for grid in grids_of(rows):
+    for grid in _shown(rows):
         if grid.corner != corner:
             corner = grid.corner
             lines += [f"## Corner {_plain(corner)}", ""]
@@ -54,7 +60,27 @@ def to_markdown(cell: str, conditions: Sequence[str], rows: Sequence[Row]) -> st
             lines.append(f"- no value at {_place(row)}: {_plain(row.status)}")
         if holes:
             lines.append("")
+    lines += certificate_lines((facts or {}).get("certificate", ()), _plain)
     return "\n".join(lines)
+
+
+def _shown(rows: Sequence[Row]) -> list[Grid]:
+    """Return every grid and, behind the last of its family, the worst of its side conditions."""
+    grids = grids_of(rows)
+    worst = worst_of(grids)
+    shown: list[Grid] = []
+    for index, grid in enumerate(grids):
+        shown.append(grid)
+        for extra in worst:
+            family = extra.title.partition(", worst of ")[0]
+            later = any(_family(other) == (extra.corner, family) for other in grids[index + 1 :])
+            if _family(grid) == (extra.corner, family) and not later:
+                shown.append(extra)
+    return shown
+
+
+def _family(grid: Grid) -> tuple[str, str]:
+    return grid.corner, grid.title.partition(" when ")[0]
 
 
 def _place(row: Row) -> str:
@@ -79,7 +105,7 @@ def print_tables(console: Console, rows: Sequence[Row]) -> None:
     from rich.table import Table
     from rich.text import Text
 
-    for grid in grids_of(rows):
+    for grid in _shown(rows):
         table = Table(
             title=Text(f"{grid.corner}: {grid.title} [ps]"),
             title_justify="left",

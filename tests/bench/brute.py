@@ -89,9 +89,8 @@ def tasks_of(cell: Cell, grid: Grid, turn: int) -> list[Task]:
     if missing:
         raise RuntimeError(f"{len(missing)} values are missing, the first: {missing[0].status}")
     transitions = {_place(a): a for a in result.answers if a.quantity is Kind.TRANSITION}
-    delays = [
-        a for a in result.answers if a.quantity is Kind.CLK_TO_Q and a.load == grid.constraint_load * 1e-15
-    ]
+    load = sheet.axes.constraint_load
+    delays = [a for a in result.answers if a.quantity is Kind.CLK_TO_Q and a.load == load]
     pairs: dict[tuple[float, float | None], list[Answer]] = {}
     for found in result.answers:
         if found.quantity in (Kind.SETUP, Kind.HOLD):
@@ -143,7 +142,7 @@ class Truth:
         self.slope = 5e-12
 
     def height(self, offset: float) -> float | None:
-        """Return log(pushout / limit) at ``offset`` [s]; None where nothing is captured, -9 for no pushout."""
+        """Return log(pushout / limit) at ``offset`` [s]; None where nothing is captured, -9 if nil."""
         until = window(self.sheet, self.arc, self.condition, self.base, offset)
         while True:
             outcome = self.evaluate(at_offset(self.sheet, self.arc, self.condition, offset, until))

@@ -115,38 +115,6 @@ class Run:
         return self.most + (1 if self.shared_references else 0)
 
     @property
-    def shared_references(self) -> int:
-        """References that a delay asked for first, though setup and hold need them too."""
-        seen = [a for a in self.result.answers if a.quantity is Kind.CLK_TO_Q]
-        outputs = {a.output for a in seen}
-        load = self.constraints[0].load
-        return sum(a.transients for a in seen if a.load == load) if len(outputs) == 1 else 0
-
-    @property
-    def charged(self) -> int:
-        """Transients that setup and hold needed: their own, their references, settling in the tables."""
-        own = sum(answer.transients for answer in self.constraints)
-        return own + self.shared_references + self.by_purpose["settling_tables"]
-
-    @property
-    def transients_mean(self) -> float:
-        """Transients a setup or hold value; reference and settling in, preparation of the corner not."""
-        return self.charged / len(self.constraints)
-
-    @property
-    def transients_mean_all_in(self) -> float:
-        """The same with as large a share of the preparation as of the tables."""
-        return self.share * self.result.transients / len(self.constraints)
-
-    @property
-    def transients_max(self) -> int:
-        """The most transients of one value, as if the value had also paid its row's settling and reference."""
-        shared = 1 if self.shared_references else 0
-        return max(
-            answer.transients + shared + self.first_of.get(_row(answer), 0) for answer in self.constraints
-        )
-
-    @property
     def share(self) -> float:
         """The share of the transients in the tables that setup and hold are charged with."""
         tables = sum(answer.transients for answer in self.result.answers) + self.by_purpose["settling_tables"]

@@ -129,8 +129,8 @@ def speedup(single: Run, double: Run, pair: tuple[Run, Run] | None) -> dict[str,
 def breakdown(run: Run, values: list[Value]) -> dict[str, Any]:
     """Return what explains the cost: where transients and time of the one-worker run went."""
     clock, accuracy = run.result.clock, run.result.accuracy["typical"]
-    known = {(a.quantity.value, a.pin_edge, a.clock_slew, a.data_slew): a.value for a in run.constraints}
-    beside = [known.get((v.kind, v.edge, v.clock_slew, v.data_slew)) for v in values]
+    known = {place(a.quantity.value, a.pin_edge, a.clock_slew, a.data_slew): a.value for a in run.constraints}
+    beside = [known.get(place(v.kind, v.edge, v.clock_slew, v.data_slew)) for v in values]
     apart = [abs(v.value - own) / PS for v, own in zip(values, beside, strict=True) if own is not None]
     return {
         "values": len(run.result.answers),
@@ -150,6 +150,11 @@ def breakdown(run: Run, values: list[Value]) -> dict[str, Any]:
         "textbook_processes_per_value": sum(value.processes for value in values) / len(values),
         "textbook_differs_ps_max": max(apart, default=None),
     }
+
+
+def place(kind: str, edge: str, clock_slew: float | None, data_slew: float | None) -> tuple[object, ...]:
+    """Return what identifies a value; slews [s] are rounded, as one side read them from text."""
+    return kind, edge, *(round((slew or 0.0) / PS, 3) for slew in (clock_slew, data_slew))
 
 
 def errors(checked: list[Checked]) -> dict[str, Any]:

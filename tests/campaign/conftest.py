@@ -27,9 +27,10 @@ def _run(
     tell: Callable[[Any], None] = lambda progress: None,
     say: Callable[[str], None] = lambda text: None,
     version: int = 39,
+    wish: Any = None,
     **faults: object,
 ) -> Any:
-    from charflow.campaign.run import run_campaign
+    from charflow.campaign.run import Wish, run_campaign
     from charflow.sheet import read_sheet
 
     with pytest.MonkeyPatch.context() as patch:
@@ -40,7 +41,7 @@ def _run(
         patch.setattr("charflow.simulate.library.library_version", lambda: version)
         for name, value in {**faults, "version": version}.items():
             patch.setenv(f"FORMULA_{name.upper()}", str(value))
-        return run_campaign(read_sheet(sheet), out, workers, corners, tell, say)
+        return run_campaign(read_sheet(sheet), out, workers, corners, tell, say, wish or Wish())
 
 
 @pytest.fixture(scope="session")

@@ -478,3 +478,10 @@ class TestAnything:
         with pytest.raises(SheetError) as caught:
             read_sheet(path)
         assert os.fspath(path) in str(caught.value)
+
+
+def test_a_key_of_thousands_of_parts_is_refused_before_it_takes_gigabytes(tmp_path: Path) -> None:
+    path = tmp_path / "deep.toml"
+    path.write_text("# " + "." * 1000 + "\na" + ".a" * 400 + " = 1\n")
+    with pytest.raises(SheetError, match=r"deep\.toml:2: this nests too deeply"):
+        read_sheet(path)

@@ -280,7 +280,7 @@ class TestShapes:
 
 
 class TestPatience:
-    @laws
+    @settings(derandomize=True, deadline=None, max_examples=60)
     @given(units(-100, 100), units(0.5, 40), st.booleans())
     def test_a_value_that_is_lost_late_does_not_count_as_captured(
         self, cliff: float, wide: float, guessed: bool

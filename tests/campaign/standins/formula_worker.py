@@ -3,8 +3,11 @@
 ``FORMULA_PACE`` [s] is slept at each trial. ``FORMULA_FAULT`` is what happens at the trials named by
 ``FORMULA_LOAD`` (the load of Q in fF, of trials in which the clock alone moves): ``die``, ``abort``,
 ``exit``, ``hang``, ``error`` or ``odd``. With
-``FORMULA_ONCE`` (a file) it happens only while that does not exist.
+``FORMULA_ONCE`` (a file) it happens only while that does not exist; ``FORMULA_COUNT`` (a file) grows by a byte
+each time.
 ``FORMULA_SLOWER`` [s] is added to every delay. ``FORMULA_VERSION`` is the simulator's.
+``FORMULA_BENT`` [1/s] times the square of the clock slew is added to every delay. ``FORMULA_APART`` [V] is
+how far pruned models are from the whole library.
 """
 
 from __future__ import annotations
@@ -21,6 +24,7 @@ from charflow.plan.arcs import Kind
 from charflow.plan.behaviour import behaviour_of
 from charflow.plan.trial import Outcome, Trial
 from charflow.sheet import Sheet
+from charflow.simulate.proof import Proof
 from charflow.simulate.session import Clock, Session
 from charflow.solve.fake import Curve, FakeOutput, FakeRegister
 
@@ -56,7 +60,14 @@ class FormulaEngine:
         time.sleep(float(os.environ.get("FORMULA_PACE", "0")))
         if _strikes(trial):
             _fail(os.environ["FORMULA_FAULT"])
-        return replace(self.register(trial), rung="standard")
+        return replace(self._bent(trial)(trial), rung="standard")
+
+    def _bent(self, trial: Trial) -> FakeRegister:
+        bend = float(os.environ.get("FORMULA_BENT", "0")) * next(
+            (move.slew**2 for move in trial.moves if move.at == 0.0), 0.0
+        )
+        outputs = tuple(replace(output, delay=output.delay + bend) for output in self.register.outputs)
+        return replace(self.register, outputs=outputs)
 
 
 def _strikes(trial: Trial) -> bool:
@@ -84,6 +95,9 @@ class Odd(Exception):
 
 
 def _fail(how: str) -> None:
+    if count := os.environ.get("FORMULA_COUNT"):
+        with Path(count).open("ab") as file:
+            file.write(b".")
     match how:
         case "die":
             os.kill(os.getpid(), signal.SIGKILL)
@@ -105,4 +119,6 @@ def work(job: worker.Job) -> worker.Done:
     held._only = held._only or FormulaSession()
     engines: Any = worker
     engines._engine = lambda circuit, settings: FormulaEngine(job.sheet, circuit.supply, held._only)
+    apart = float(os.environ.get("FORMULA_APART", "0"))
+    engines.compare = lambda full, pruned, trial: Proof(100, apart, not apart)
     return worker.work(job)
