@@ -406,6 +406,33 @@ def compare(
 
 
 @main.command()
+@click.argument("sheet", type=click.Path(path_type=Path))
+@click.option("--out", type=click.Path(path_type=Path), required=True, help="Folder of a finished run.")
+@_workers_option
+def power(sheet: Path, out: Path, workers: int | None) -> None:
+    """Measure input capacitance, switching energy and leakage of the cell of SHEET into its run folder.
+
+    They go into power.csv there, and from it into Liberty. Each input edge is simulated from every settled
+    state, or from eight of many.
+
+    Example: charflow power my_cell.toml --out run/
+    """
+    from charflow.campaign.power import measure_power
+    from charflow.sheet import read_sheet
+    from charflow.tables.power import power_row, power_summary, rests_of, write_power
+
+    read = read_sheet(sheet)
+    rests = rests_of(out, read)
+    found = measure_power(read, rests, _workers(workers), lambda text: click.echo(text, err=True))
+    rows = [power_row(item) for item in found]
+    write_power(out, rows)
+    for line in power_summary(rows):
+        click.echo(line)
+    if any(row.value is None for row in rows):
+        sys.exit(1)
+
+
+@main.command()
 def doctor() -> None:
     """Check that the simulator is there and sound.
 

@@ -1,4 +1,4 @@
-"""Live progress on standard error: points done, transients, time left. Plain lines where it is no terminal."""
+"""Live progress on standard error: points done, transients, time left. Plain lines into a file."""
 
 from __future__ import annotations
 

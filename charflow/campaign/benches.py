@@ -17,10 +17,10 @@ from charflow.campaign.codec import outcome_from, settings_from, trial_from
 from charflow.campaign.store import Store
 from charflow.campaign.worker import trial_key
 from charflow.errors import CharflowError, FolderError
-from charflow.plan.circuit import Circuit
+from charflow.plan.circuit import Circuit, digest_of, parts_of
 from charflow.plan.deck import Settings
 from charflow.plan.trial import Outcome, Trial
-from charflow.sheet.lines import logical_lines, render
+from charflow.sheet.lines import Line, logical_lines, render
 from charflow.sheet.schema import PIN_NAME
 from charflow.sheet.screen import OPTIONS, Screen
 from charflow.simulate.engine import ladder
@@ -73,15 +73,15 @@ def kept_trial(store: Store, bench: str, key: str, allow: frozenset[str] = froze
         on = _bench(raw)
         trial, outcome = trial_from(found[0]), outcome_from(found[1])
         matches = trial_key(on.circuit, on.settings, on.version, trial) == key
+        circuit = _screened(on, trial, allow, place)
     except (KeyError, TypeError, ValueError, AttributeError) as error:
         raise FolderError(f"the store's entry cannot be read: {error!r}", where=(place,)) from None
-    if not matches:
+    if not matches or digest_of(circuit.parts) != on.circuit.digest:
         raise FolderError(
-            f"trial {key} did not run on the circuit and settings that the tables name",
+            f"trial {key} did not run on the circuit and settings that the store names",
             where=(place,),
             todo="Run charflow run again in this folder.",
         )
-    circuit = _screened(on, trial, allow, place)
     rung = next((s for s in ladder(on.settings) if s.name == outcome.rung), on.settings)
     return Kept(circuit, rung, trial, outcome)
 
@@ -117,7 +117,10 @@ def _bench(raw: dict[str, Any]) -> Bench:
 
 
 def _screened(bench: Bench, trial: Trial, allow: frozenset[str], place: str) -> Circuit:
-    """Return the circuit with nothing but screened text in it; raise where more would get into a deck."""
+    """Return the circuit with nothing but screened text in it, its parts computed anew.
+
+    Raises where more than that would get into a deck.
+    """
     circuit, settings = bench.circuit, bench.settings
     pins = {*circuit.inputs, *circuit.outputs, *circuit.powers, *circuit.grounds}
     options = "|".join(OPTIONS)
@@ -142,12 +145,14 @@ def _screened(bench: Bench, trial: Trial, allow: frozenset[str], place: str) -> 
     if odd is not None or set(circuit.ports) != pins:
         raise FolderError(f"the kept circuit is not sound: {odd or 'its pins'!r}", where=(place,))
     dollar = "ps" not in (circuit.compatibility or "")
-    screen, texts = Screen(allow), []
+    screen = Screen(allow)
+    texts: list[tuple[Line, ...]] = []
     for name in ("models", "netlist"):
         lines = logical_lines(getattr(circuit, name), Path(f"kept {name}"), dollar_comments=dollar)
         try:
             kept = [screen.line(line) for line in lines]
         except CharflowError as error:
             raise error.at(place) from None
-        texts.append(render(line for line in kept if line is not None))
-    return replace(circuit, models=texts[0], netlist=texts[1])
+        texts.append(tuple(line for line in kept if line is not None))
+    parts = parts_of(circuit, *texts)
+    return replace(circuit, models=render(texts[0]), netlist=render(texts[1]), parts=parts)

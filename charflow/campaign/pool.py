@@ -33,7 +33,9 @@ class WorkerLost(Exception):
 
 
 class Pool(Protocol):
-    """Runs jobs somewhere; ``submit`` returns a future of what came of one."""
+    """Runs jobs somewhere, ``seats`` of them at once; ``submit`` returns a future of what came of one."""
+
+    seats: int
 
     def submit(self, job: Job) -> Future[Done]:
         """Start ``job`` as soon as a worker is free. The future raises :class:`WorkerLost` if that dies."""
@@ -54,6 +56,7 @@ class LocalPool:
     """``workers`` processes on this machine. One that dies fails only its own job and is replaced."""
 
     def __init__(self, workers: int, journals: Path) -> None:
+        self.seats = workers
         self._journals = str(journals.absolute())
         self._jobs: SimpleQueue[tuple[Job, Future[Done]] | None] = SimpleQueue()
         self._stopping = threading.Event()

@@ -9,12 +9,15 @@ from typing import Any
 from charflow import __version__
 from charflow.campaign.facts import causes, facts_of, remembered
 from charflow.campaign.folder import JOURNALS
+from charflow.campaign.graph import Node, nodes_of
 from charflow.campaign.journal import Follower
-from charflow.campaign.schedule import Campaign, recall, trials_kept
+from charflow.campaign.schedule import Campaign, ModelsDifferError, recall, trials_kept
 from charflow.campaign.store import FILE, Store
-from charflow.errors import FolderError
+from charflow.errors import FolderError, visible
 from charflow.plan.circuit import circuit_of, read_sources
 from charflow.sheet import Sheet
+
+UNPROVED = "what pruning left of the models is not yet compared with the whole library"
 
 
 @dataclass(frozen=True)
@@ -39,19 +42,27 @@ def redo(sheet: Sheet, folder: Path) -> list[CornerRedo]:
     Writes nothing. Raises :class:`CharflowError` where the files, the folder or the simulator cannot be used.
     """
     from charflow.simulate.library import library_version
+    from charflow.simulate.proof import needless
 
     sources = read_sources(sheet)
     corners = tuple(sheet.corners)
     circuits = {name: circuit_of(sheet, sources, name) for name in corners}
+    whole = {name: circuit_of(sheet, sources, name, pruned=False) for name in corners}
     store = _store(folder)
     if store is None:
         return [_all_new(sheet, corner) for corner in corners]
     try:
-        follower = Follower(folder / JOURNALS)
-        campaign = Campaign(
-            sheet, corners, circuits, store, follower, library_version(), lambda progress: None
-        )
-        return _corners(campaign)
+        version = library_version()
+        while True:
+            follower = Follower(folder / JOURNALS)
+            campaign = Campaign(
+                sheet, corners, dict(circuits), store, follower, version, lambda progress: None, whole=whole
+            )
+            unproved = [name for name in corners if needless(whole[name], circuits[name]) is None]
+            try:
+                return _corners(campaign, recall(campaign, unproved))
+            except ModelsDifferError as error:  # the store knows that this corner needs the whole library
+                circuits[error.corner] = whole[error.corner]
     finally:
         store.close()
 
@@ -66,24 +77,23 @@ def _store(folder: Path) -> Store | None:
 
 
 def _all_new(sheet: Sheet, corner: str) -> CornerRedo:
-    from charflow.campaign.graph import nodes_of
-
     nodes = [node for node in nodes_of(sheet, (corner,)) if node.group is not None]
     points = sum(node.points for node in nodes)
     return CornerRedo(corner, len(nodes), 0, points, 0, 0, ("nothing was measured in this folder",))
 
 
-def _corners(campaign: Campaign) -> list[CornerRedo]:
+def _corners(campaign: Campaign, jobs: list[tuple[Node, bool]]) -> list[CornerRedo]:
     facts = {
         corner: facts_of(campaign.sheet, circuit, campaign.version)
         for corner, circuit in campaign.circuits.items()
     }
     found = []
-    jobs = recall(campaign)
     for corner in campaign.corners:
         rows = [(node, kept) for node, kept in jobs if node.corner == corner and node.group is not None]
         kept = [node for node, there in rows if there]
         before = remembered(campaign.store, corner)
+        proved = all(there for node, there in jobs if node.corner == corner and node.proves)
+        why = () if len(kept) == len(rows) else _why(before, facts[corner], some=bool(kept))
         same_simulator = before is None or before.get("ngspice") == campaign.version
         found.append(
             CornerRedo(
@@ -93,7 +103,7 @@ def _corners(campaign: Campaign) -> list[CornerRedo]:
                 points=sum(node.points for node, _ in rows),
                 points_kept=sum(node.points for node in kept),
                 trials_kept=trials_kept(campaign, corner) if same_simulator else 0,
-                causes=() if len(kept) == len(rows) else _why(before, facts[corner], some=bool(kept)),
+                causes=why if proved else (*why, UNPROVED),
             )
         )
     return found
@@ -117,11 +127,12 @@ def redo_facts(found: list[CornerRedo]) -> list[dict[str, Any]]:
 
 def redo_text(found: list[CornerRedo], folder: Path) -> str:
     """Return the outcome in words, a few lines a corner."""
-    lines = [f"a run into {folder} would:"]
+    lines = [f"a run into {visible(str(folder))} would:"]
     for corner in found:
         missing = corner.points - corner.points_kept
         if not missing:
             lines.append(f"  {corner.corner}: take all {corner.points} values from the store")
+            lines += [f"    but: {cause}" for cause in corner.causes]
             continue
         lines.append(f"  {corner.corner}: solve {missing} of {corner.points} values, because")
         lines += [f"    {cause}" for cause in corner.causes]

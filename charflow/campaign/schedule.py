@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Collection, Iterator
 from concurrent.futures import FIRST_COMPLETED, Future, wait
 from dataclasses import asdict, replace
 
@@ -43,6 +43,8 @@ def drive(campaign: Campaign, make_pool: Callable[[], Pool], stopped: Callable[[
     with make_pool() as pool:
         while waiting or running:
             for node in _ready(campaign, waiting):
+                if len(running) >= pool.seats:  # a job that waits would not know what others find meanwhile
+                    break
                 del waiting[node.label]
                 running[pool.submit(_job(campaign, node))] = node
             finished, _ = wait(running, timeout=0.2, return_when=FIRST_COMPLETED)
@@ -84,13 +86,14 @@ def _absorbed(campaign: Campaign, seen: dict[int, float] | None) -> int:
     return len(items)
 
 
-def recall(campaign: Campaign) -> list[tuple[Node, bool]]:
+def recall(campaign: Campaign, unproved: Collection[str] = ()) -> list[tuple[Node, bool]]:
     """Return every job of the run and whether the store has what came of it; nothing is run.
 
-    The rows of a corner whose preparation is not in the store are not there either.
+    The rows of a corner whose preparation is not in the store are not there either. Raises
+    :class:`ModelsDifferError` where the store says so of an ``unproved`` corner.
     """
     found = []
-    for node in nodes_of(campaign.sheet, campaign.corners):
+    for node in nodes_of(campaign.sheet, campaign.corners, unproved):
         ready = node.group is None or node.corner in campaign.accuracy
         found.append((node, ready and _from_store(campaign, node)))
     return found
@@ -179,8 +182,10 @@ def _trial_label(campaign: Campaign, corner: str, group: Group | None = None, cl
 def _job(campaign: Campaign, node: Node) -> Job:
     label = _trial_label(campaign, node.corner, node.group, node.clock_slew)
     known = campaign.store.outcomes(label)
-    if node.group is not None:  # rows repeat some trials of the preparation
-        known |= campaign.store.outcomes(_trial_label(campaign, node.corner))
+    if node.group is not None:  # rows repeat some trials of the preparation, and of each other
+        others = {_trial_label(campaign, node.corner, group, node.clock_slew) for group in campaign.groups}
+        for other in sorted(others | {_trial_label(campaign, node.corner)}):
+            known |= campaign.store.outcomes(other)
     known_rows = [campaign.rows[name] for name in node.after if name in campaign.rows]
     if node.axes is not None:
         known_rows = [hints_at(known_rows, node.clock_slew, node.axes.data_slew)]

@@ -5,6 +5,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
+from functools import cached_property
 
 from charflow.campaign.graph import Node
 from charflow.campaign.journal import Follower
@@ -16,7 +17,7 @@ from charflow.sheet import Sheet
 from charflow.simulate.proof import Proof
 from charflow.simulate.session import Clock
 from charflow.solve.accuracy import Accuracy
-from charflow.solve.row import RowResult
+from charflow.solve.row import Group, RowResult, groups_of
 
 
 @dataclass
@@ -59,6 +60,11 @@ class Campaign:
     timing: Timing = field(default_factory=lambda: Timing(time.monotonic()))
     first: Callable[[], list[Node]] = list
     more: Callable[[Mapping[str, RowResult]], list[Node]] = lambda rows: []
+
+    @cached_property
+    def groups(self) -> tuple[Group, ...]:
+        """The arcs of the cell, grouped by what they share."""
+        return groups_of(self.sheet)
 
 
 class ModelsDifferError(Exception):

@@ -87,6 +87,9 @@ class Store:
                 for _, sound in _entries(db, table):
                     if not sound:
                         raise sqlite3.DatabaseError(f"an entry of {table} does not fit its seal")
+        except UnicodeDecodeError:  # the sqlite3 module makes one of a complaint that quotes damage
+            db.close()
+            raise sqlite3.DatabaseError("its description is not text") from None
         except BaseException:
             db.close()
             raise
@@ -192,7 +195,7 @@ def _entries(db: sqlite3.Connection, table: str) -> Iterator[tuple[tuple[str, ..
     try:
         for *values, stated in db.execute(f"SELECT {', '.join(_COLUMNS[table])}, seal FROM {table}"):
             yield tuple(values), stated == seal(*values)
-    except sqlite3.OperationalError as error:  # what cannot be decoded, or has other columns, is damage too
+    except (sqlite3.OperationalError, UnicodeDecodeError) as error:  # no text, or other columns: damage too
         raise sqlite3.DatabaseError(str(error)) from None
 
 

@@ -19,6 +19,8 @@ from charflow.sheet.netlist import Line, check_ports, find_subckt, loose_element
 from charflow.sheet.prune import prune
 from charflow.sheet.sources import Rules, fingerprint, gather
 
+Parts = tuple[tuple[str, str], ...]
+
 
 @dataclass(frozen=True)
 class Circuit:
@@ -156,13 +158,22 @@ def circuit_of(sheet: Sheet, sources: Sources, corner: str, *, pruned: bool = Tr
         fractions=sheet.measure.slew_fractions,
         digest="",
     )
-    parts = (
+    parts = parts_of(circuit, models, sources.netlist)
+    return replace(circuit, digest=digest_of(parts), parts=parts)
+
+
+def parts_of(circuit: Circuit, models: Iterable[Line], netlist: Iterable[Line]) -> Parts:
+    """Return by name what decides the outcomes of ``circuit``, with these lines as models and netlist."""
+    return (
         ("models", fingerprint(models)),
-        ("netlist", fingerprint(sources.netlist)),
+        ("netlist", fingerprint(netlist)),
         *((name, repr(getattr(circuit, name))) for name in _DECIDING),
     )
-    text = "\n".join(part for _, part in parts)
-    return replace(circuit, digest=hashlib.sha256(text.encode()).hexdigest(), parts=parts)
+
+
+def digest_of(parts: Parts) -> str:
+    """Return the digest of a circuit with these parts."""
+    return hashlib.sha256("\n".join(part for _, part in parts).encode()).hexdigest()
 
 
 _DECIDING = (

@@ -13,7 +13,6 @@ from dataclasses import dataclass
 from charflow.errors import SheetError
 from charflow.plan.arcs import Arc, Kind
 from charflow.plan.behaviour import Behaviour, Bits, behaviour_of
-from charflow.plan.trial import Start
 from charflow.sheet import Sheet
 
 Vector = dict[str, bool]
@@ -100,7 +99,7 @@ def constraints(cell: Behaviour) -> Iterator[Arc]:
             for rising in (True, False):
                 found = list(_constraint(cell, kind, pin, rising))
                 switching = [arc for arc in found if arc.observed]
-                # Where an edge can be measured with an output switching, it is; else what must stay is watched.
+                # Measured with an output switching where that can be; else what must stay is watched.
                 yield from switching if switching and not cell.transparent else found
 
 

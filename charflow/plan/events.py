@@ -18,7 +18,8 @@ MOST = 8  # settled states an edge of one pin is measured from; more are sampled
 class Event:
     """An edge of ``pin`` from the rest of ``start``; ``moved`` are the outputs it moves, and where to.
 
-    ``control`` is the level of the clock or gate meanwhile, None where it is the pin itself.
+    ``control`` is the level of the clock or gate meanwhile, None where it is the pin itself. ``idle``
+    tells that what is stored is what the data inputs ask for, so nothing new waits behind a closed clock.
     """
 
     pin: str
@@ -26,6 +27,7 @@ class Event:
     start: Start
     moved: tuple[tuple[str, bool], ...]
     control: bool | None
+    idle: bool
 
 
 @dataclass(frozen=True)
@@ -63,7 +65,7 @@ def resting_states(cell: Behaviour) -> list[Resting]:
 
 
 def events_of(cell: Behaviour) -> list[Event]:
-    """Return the events of a cell, at most :data:`MOST` a pin, edge, control level and kind."""
+    """Return the events of a cell; of those alike in pin, edge, control and outputs at most :data:`MOST`."""
     together: dict[tuple[object, ...], list[Event]] = {}
     for state, vector, start in _settings(cell):
         before = cell.shown(state, vector)
@@ -75,8 +77,9 @@ def events_of(cell: Behaviour) -> list[Event]:
                 continue
             moved = tuple((p, bool(v)) for p, v in shown.items() if v != before[p])
             control = None if pin == cell.control else vector[cell.control]
-            event = Event(pin, now[pin], start, moved, control)
-            together.setdefault((pin, now[pin], control, moved), []).append(event)
+            idle = cell.captured(state, vector) == state
+            event = Event(pin, now[pin], start, moved, control, idle)
+            together.setdefault((pin, now[pin], control, moved, idle), []).append(event)
     return [event for events in together.values() for event in _sampled(events)]
 
 

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 from typing import Any
 
+from charflow.errors import visible
 from charflow.plan.arcs import DELAYS, WIDTHS, Kind
-from charflow.plan.derive import arcs_of
 from charflow.plan.circuit import read_sources
+from charflow.plan.derive import arcs_of
 from charflow.sheet import Sheet
 from charflow.sheet.netlist import find_subckt, read_subckts
 
@@ -80,5 +81,5 @@ def outline_text(facts: dict[str, Any]) -> str:
         f"about {facts['seconds_on_one_core_about']:g} s on one core",
     ]
     if "decks" in facts:
-        lines.append(f"{facts['decks']['count']} decks written to {facts['decks']['folder']}/")
+        lines.append(f"{facts['decks']['count']} decks written to {visible(facts['decks']['folder'])}/")
     return "\n".join(lines)

@@ -29,7 +29,7 @@ class Flip:
     after: tuple[tuple[str, bool | None], ...]
 
 
-class Mismatch(Exception):  # noqa: N818  # not an error of its own: it carries one to where it can be shown
+class Mismatch(Exception):  # not an error of its own: it carries one to where it can be shown
     """A flip that does not do what the sheet says: the ``error`` for the user and the ``flip`` to look at."""
 
     def __init__(self, error: FunctionError, flip: Flip) -> None:

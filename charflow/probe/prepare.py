@@ -1,4 +1,4 @@
-"""Everything known about a corner before its tables are measured: function proved, rest and settings chosen."""
+"""What is settled about a corner before its tables are measured: function proved, rest chosen."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""Where the built-in scenario lies: beside the package in an installed wheel, beside it in the source tree."""
+"""Where the built-in scenario lies: inside an installed package, beside it in the source tree."""
 
 from __future__ import annotations
 

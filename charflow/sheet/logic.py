@@ -32,7 +32,7 @@ class Logic:
 
     @property
     def tree(self) -> tuple[object, ...]:
-        """The parsed tree: ``name``, ``const``, ``not``, ``and``, ``or``, ``xor`` or ``choose``, then operands."""
+        """The parsed tree: name, const, not, and, or, xor or choose, each with its operands behind it."""
         return self._tree
 
     def value(self, levels: Mapping[str, Bit]) -> Bit:

@@ -14,7 +14,7 @@ from dataclasses import dataclass
 
 from charflow.sheet.bins import Block, Sizes, needless, scales
 from charflow.sheet.lines import Line
-from charflow.sheet.netlist import closes_subckt, opens_subckt
+from charflow.sheet.netlist import closes_subckt, opens_subckt, positional
 
 _WORD = re.compile(r"[\w.$#!]+")
 _DEFINED = re.compile(r"\b([a-z_]\w*) ?(?:\([^()]*\) ?)?=(?!=)")
@@ -85,6 +85,8 @@ def _parts(lines: Sequence[Line]) -> list[_Part]:
     for line in lines:
         text = line.text
         if text[0] != ".":
+            if text[0] in "xX" and not positional(text):  # it does not say plainly what it calls
+                raise _UnclearError
             if depth:
                 held.append(line)
             else:

@@ -9,7 +9,7 @@ from itertools import pairwise
 from pathlib import Path
 from typing import Annotated, Any, Literal, Self
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, model_validator
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, field_validator, model_validator
 
 from charflow.errors import SheetError
 from charflow.sheet.units import Unit, parse
@@ -21,7 +21,9 @@ def _quantity(unit: Unit) -> BeforeValidator:
     def convert(value: Any) -> float:
         if not isinstance(value, str):
             shown = f"{value!r} has no unit" if isinstance(value, int | float) else f"{value!r} is not text"
-            raise ValueError(f"{shown}; write it as quoted text with its unit, such as {_SAMPLE[unit]}")
+            raise ValueError(  # noqa: TRY004  # pydantic collects ValueError only
+                f"{shown}; write it as quoted text with its unit, such as {_SAMPLE[unit]}"
+            )
         try:
             return parse(value, unit)
         except SheetError as error:
@@ -96,7 +98,8 @@ class Pin(_Strict):
         if wanted is not None and self.active not in wanted:
             found = "nothing" if self.active is None else repr(self.active)
             raise ValueError(
-                f"a pin of role {self.role.value!r} needs active = {wanted[0]!r} or {wanted[1]!r}, found {found}"
+                f"a pin of role {self.role.value!r} needs active = {wanted[0]!r} or {wanted[1]!r}, "
+                f"found {found}"
             )
         if self.role is Role.OUTPUT and self.shows is None:
             raise ValueError('an output needs shows, such as shows = "state" or shows = "!state"')
@@ -114,14 +117,15 @@ class Corner(_Strict):
     compatibility: str | None = Field(default=None, pattern=r"^[a-z]{2,12}$")
     options: dict[str, float] = {}
 
-    @model_validator(mode="after")
-    def _plain_options(self) -> Self:
-        for name, value in self.options.items():
+    @field_validator("options")
+    @classmethod
+    def _plain_options(cls, options: dict[str, float]) -> dict[str, float]:
+        for name, value in options.items():
             if not re.fullmatch(r"[A-Za-z]\w{0,30}", name):
-                raise ValueError(f"options: {name!r} is not the name of a SPICE option")
+                raise ValueError(f"{name!r} is not the name of a SPICE option")
             if not math.isfinite(value):
-                raise ValueError(f"options.{name} must be a finite number, found {value}")
-        return self
+                raise ValueError(f"{name} must be a finite number, found {value}")
+        return options
 
 
 def _ascending(values: tuple[float, ...], what: str) -> None:
@@ -184,7 +188,8 @@ class Measure(_Strict):
         low, high = self.slew_fractions
         if not 0 < low < 0.5 < high < 1:
             raise ValueError(
-                f"slew_fractions must be two numbers either side of 0.5 and inside 0 to 1, found {low:g}, {high:g}"
+                f"slew_fractions must be two numbers either side of 0.5 and inside 0 to 1, "
+                f"found {low:g}, {high:g}"
             )
         return self
 

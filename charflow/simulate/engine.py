@@ -67,7 +67,7 @@ class Engine:
     def waves(
         self, trial: Trial, save: tuple[str, ...] | None = None
     ) -> tuple[dict[str, Samples], str, float]:
-        """Return the waveforms [V] by node with ``time`` [s], the rung used, and the trial's time zero there."""
+        """Return waveforms [V] by node with ``time`` [s], the rung used, and the trial's time zero there."""
         errors: list[TrialError] = []
         for settings in ladder(self.settings):
             try:

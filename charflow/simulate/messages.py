@@ -54,11 +54,23 @@ _LOAD = (
     ),
 )
 _RUN = (
-    (r"singular matrix:?\s*(?:check nodes? )?(.*)", "singular matrix {0}", "A node has no path for direct current, or two sources are in parallel."),
-    (r"[Tt]imestep too small.*?trouble with ([^\n]+)", "the time step became too small (trouble with {0})", ""),
+    (
+        r"singular matrix:?\s*(?:check nodes? )?(.*)",
+        "singular matrix {0}",
+        "A node has no path for direct current, or two sources are in parallel.",
+    ),
+    (
+        r"[Tt]imestep too small.*?trouble with ([^\n]+)",
+        "the time step became too small (trouble with {0})",
+        "",
+    ),
     (r"[Tt]imestep too small", "the time step became too small", ""),
-    (r"iteration limit reached|Transient op (?:failed|aborted)|no convergence|gmin stepping failed|source stepping failed", "no operating point was found", ""),
-)  # fmt: skip
+    (
+        r"iteration limit reached|Transient op (?:failed|aborted)|no convergence|stepping failed",
+        "no operating point was found",
+        "",
+    ),
+)
 
 
 def load_error(lines: Iterable[str]) -> LoadError:

@@ -13,6 +13,7 @@ import os
 import time
 from collections import OrderedDict
 from collections.abc import Iterable, Mapping
+from contextlib import suppress
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -99,10 +100,8 @@ class Session:
 
     def command(self, text: str) -> list[str]:
         """Run one ngspice command and return the lines it printed (standard output and error)."""
-        try:
+        with suppress(NameError):  # PySpice raises it for any line on standard error; the lines tell more
             self._shared.exec_command(text)
-        except NameError:  # PySpice raises it for any line on standard error; the lines tell more
-            pass
         return [*self._shared._stdout, *self._shared._stderr]
 
     def has(self, key: object) -> bool:
@@ -129,10 +128,8 @@ class Session:
         self._current = None
         self.command("unset scale")  # or the .option scale of the circuit before would still hold
         text = "\n".join([title, *list(lines)[1:]])
-        try:
+        with suppress(NameError):
             self._shared.load_circuit(text)
-        except NameError:
-            pass
         said = [*self._shared._stdout, *self._shared._stderr]
         if any("cannot recover" in line for line in said):
             self._broken = load_error(said).message  # touching the library again may end the process

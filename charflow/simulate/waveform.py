@@ -16,7 +16,7 @@ Samples = NDArray[np.float64]
 
 
 def crossing_times(time: Samples, value: Samples, level: float) -> list[float]:
-    """Return the times at which ``value`` passes ``level``, in order. Shapes: both (n,), same unit as time."""
+    """Return the times at which ``value`` passes ``level``, in order and unit of ``time``; shapes (n,)."""
     above = value > level
     return [_cross(time, value, level, int(i)) for i in np.flatnonzero(above[1:] != above[:-1])]
 

@@ -2,8 +2,8 @@
 
 With the trapezoidal rule and error-controlled steps the error of a crossing falls with about the power
 2/3 of the tolerance (the local error is of third order in the step, the global one of second). So if
-halving the tolerance moves an answer by m, about m / (2^(2/3) - 1) was wrong before, and a factor 2^(2/3)
-less is wrong after; that rest is reported as what the answer is converged to.
+halving the tolerance moves an answer by m, about m / (2^(2/3) - 1) is still wrong after it; that is reported
+as what the answer is converged to.
 """
 
 from __future__ import annotations
@@ -19,8 +19,8 @@ from charflow.plan.stimulus import Condition, at_offset, pin_time
 from charflow.plan.trial import Outcome, Trial
 from charflow.sheet import Sheet
 from charflow.solve.constraint import Constraint, solve_constraint, window
-from charflow.solve.reference import reference
 from charflow.solve.crossing import Ending, Guess, shape_of
+from charflow.solve.reference import reference
 from charflow.solve.row import Group, Hint, Question, RowResult, question
 from charflow.solve.verdict import Reference, pushout
 
@@ -83,8 +83,8 @@ def choose_settings(
         now = [_places(make(settings), sheet, probe) for probe in probes]
         delay = max(_relative(a, b) for (a, _), (b, _) in zip(before, now, strict=True)) / (gain - 1)
         place = max(abs(a - b) for (_, a), (_, b) in zip(before, now, strict=True)) / (gain - 1)
-        if (delay <= gain * DELAY_SHARE and place <= gain * CONSTRAINT_ERROR) or settings.reltol < TIGHTEST:
-            return Accuracy(settings, delay / gain, place / gain, halvings, _taught(sheet, probes))
+        if (delay <= DELAY_SHARE and place <= CONSTRAINT_ERROR) or settings.reltol < TIGHTEST:
+            return Accuracy(settings, delay, place, halvings, _taught(sheet, probes))
         before = now
 
 

@@ -1,4 +1,4 @@
-"""One table entry, with everything needed to doubt it: bracket, status, cost and the trial that decided it."""
+"""One table entry, with everything needed to doubt it: bracket, status, cost and deciding trial."""
 
 from __future__ import annotations
 

@@ -38,10 +38,9 @@ def point_of(answer: Answer) -> Point:
 
 def surfaces(answers: Iterable[Answer]) -> dict[Table, Surface]:
     """Return every table of ``answers``, values in seconds."""
-    values: dict[Table, dict[Point, float]] = {}
+    values: dict[Table, dict[Point, float | None]] = {}
     for answer in answers:
-        if answer.value is not None:
-            values.setdefault(table_of(answer), {})[point_of(answer)] = answer.value
+        values.setdefault(table_of(answer), {})[point_of(answer)] = answer.value
     return {table: surface(points) for table, points in values.items()}
 
 
@@ -112,7 +111,7 @@ def checks_of(row: RowResult, tables: dict[Table, Surface]) -> list[Check]:
     found = []
     for answer in row.answers:
         table = tables.get(table_of(answer))
-        if table is not None and point_of(answer) in table.values:
+        if table is not None and point_of(answer) in table:
             continue
         read = None if table is None else table.at(point_of(answer))
         found.append(Check(answer, read, _scale(answer, row)))
@@ -147,8 +146,7 @@ def certify(answers: Sequence[Answer], rows: Iterable[RowResult]) -> tuple[Certi
             checks.setdefault(table_of(check.answer), []).append(check)
     found = []
     for table, names in {table_of(answer): coordinates(answer) for answer in answers}.items():
-        axes = tables[table].axes if table in tables else ()
-        along = tuple(name for name, axis in zip(names, axes, strict=False) if len(axis) > 1)
+        along = tuple(name for name, axis in zip(names, tables[table].axes, strict=True) if len(axis) > 1)
         ordered = sorted(checks.get(table, ()), key=lambda check: point_of(check.answer))
         found.append(Certificate(table, along, tuple(ordered)))
     return tuple(found)

@@ -44,7 +44,7 @@ def solve_constraint(
     for pin, delay in reference.delays.items():
         if delay <= 0:
             raise TrialError(
-                f"the reference delay of {pin} is {delay * 1e12:.3f} ps, so no pushout can be a fraction of it",
+                f"the reference delay of {pin} is {delay * 1e12:.3f} ps; no pushout is a fraction of that",
                 todo="The input slew is so slow that the output moves before the input's 50 % point.",
             )
     limit = sheet.measure.pushout

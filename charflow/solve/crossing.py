@@ -78,7 +78,7 @@ class Guess:
 
 @dataclass(frozen=True)
 class Crossing:
-    """The result of a search: bracket ``fails`` < crossing <= ``passes`` [s], every sample, and the slope [s]."""
+    """The result of a search: ``fails`` < crossing <= ``passes`` [s], every sample, and the slope [s]."""
 
     ending: Ending
     value: float | None
@@ -297,7 +297,7 @@ class Search:
 
 
 def along(shape: Shape, height: float, slope: float) -> float:
-    """Return the offset from the crossing [s] at which ``shape`` has this log pushout; beyond it, straight on."""
+    """Return the offset from the crossing [s] where ``shape`` has this log pushout; beyond it, straight."""
     if len(shape) < 2:
         return -slope * height
     for (h0, x0), (h1, x1) in pairwise(shape):

@@ -17,10 +17,13 @@ Point = tuple[float, ...]
 
 @dataclass(frozen=True)
 class Surface:
-    """Values over ascending axes, in any units; ``values`` is keyed by point and may have holes."""
+    """Values over ascending axes, in any units; ``values`` is keyed by point, None or absent at a hole."""
 
     axes: tuple[tuple[float, ...], ...]
-    values: Mapping[Point, float]
+    values: Mapping[Point, float | None]
+
+    def __contains__(self, point: Point) -> bool:
+        return point in self.values
 
     def at(self, point: Point) -> float | None:
         """Return the value at ``point``, one coordinate an axis; None where it leans on a hole."""
@@ -42,8 +45,8 @@ class Surface:
         return total
 
 
-def surface(values: Mapping[Point, float]) -> Surface:
-    """Return the surface through ``values``, with the axes that occur in it."""
+def surface(values: Mapping[Point, float | None]) -> Surface:
+    """Return the surface through ``values``, with the axes that occur in it, at holes (None) too."""
     axes = tuple(tuple(sorted(set(coordinates))) for coordinates in zip(*values, strict=True))
     return Surface(axes, values)
 

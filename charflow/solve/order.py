@@ -38,7 +38,7 @@ def between(at: float, known: Mapping[float, float]) -> float:
 
 
 def enclosing(at: float, points: Sequence[float]) -> tuple[float, ...]:
-    """Return the nearest point below and above ``at``; where a side is empty, the two nearest of the other."""
+    """Return the nearest points below and above ``at``; with a side empty, the two nearest of the other."""
     below = sorted((x for x in points if x <= at), reverse=True)
     above = sorted(x for x in points if x > at)
     if below and above:

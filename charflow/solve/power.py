@@ -31,6 +31,7 @@ from charflow.sheet import Sheet
 RunFlow = Callable[[Trial], Flow]
 RunStanding = Callable[[Start], Standing]
 
+NEW_DATA = "new data waits"  # the edge lets it into the cell, though no output moves yet
 FIRST_WINDOW = 1e-9  # s; doubled until all currents are still
 LONGEST_WINDOW = 1e-5
 WRONG_LEVEL = 0.05  # of supply, by which an output at rest may be off its rail
@@ -115,8 +116,7 @@ class PowerSolver:
         return self.sheet.pins[pin].role == "power"
 
     def _axis(self, pin: str) -> tuple[float, ...]:
-        fast = pin == self.cell.control or pin in self.cell.asynchronous_pins
-        return self.sheet.axes.clock_slew if fast else self.sheet.axes.data_slew
+        return self.sheet.axes.clock_slew if self._fast(pin) else self.sheet.axes.data_slew
 
     def _capacitance(self, pin: str, rising: bool, events: Sequence[Event]) -> Iterator[Power]:
         axis = self._axis(pin)
@@ -133,16 +133,13 @@ class PowerSolver:
             yield self._mean("capacitance", values, len(self.flows) - before, **head)
 
     def _quiet(self, pin: str, rising: bool, events: Sequence[Event]) -> Iterator[Power]:
-        """Yield the energy of edges that move no output, over the slew axis, for each level of the control."""
-        for control in dict.fromkeys(event.control for event in events):
-            some = [event for event in events if event.control is control and not event.moved]
-            fast = pin in (self.cell.control, *self.cell.asynchronous_pins)
-            if fast and control is not None:  # no condition is put on these
-                some = [event for event in events if not event.moved]
-                if control is not events[0].control:
-                    continue
-            when = "" if fast else f"{'' if control else '!'}{self.cell.control}"
-            for slew in self._axis(pin) if some else ():
+        """Yield the energy of edges that move no output, over the slew axis, for each side condition."""
+        sides: dict[str, list[Event]] = {}
+        for event in events:
+            if not event.moved:
+                sides.setdefault(self._side(event), []).append(event)
+        for when, some in sides.items():
+            for slew in self._axis(pin):
                 head = {"pin": pin, "pin_edge": edge_name(rising), "when": when, "slew": slew}
                 before = len(self.flows)
                 try:
@@ -152,10 +149,18 @@ class PowerSolver:
                     continue
                 yield self._mean("energy", values, len(self.flows) - before, **head)
 
+    def _side(self, event: Event) -> str:
+        """Return the condition an edge that moves no output is told apart by."""
+        if self._fast(event.pin):
+            return "" if event.idle else NEW_DATA
+        return f"{'' if event.control else '!'}{self.cell.control}"
+
+    def _fast(self, pin: str) -> bool:
+        return pin == self.cell.control or pin in self.cell.asynchronous_pins
+
     def _moving(self, pin: str, rising: bool, events: Sequence[Event]) -> Iterator[Power]:
         """Yield the energy of edges that move an output, over slew and load, from one settled state each."""
-        fast = pin in (self.cell.control, *self.cell.asynchronous_pins)
-        quiet = [event for event in events if not event.moved] if fast else []
+        quiet = [e for e in events if not e.moved and e.idle] if self._fast(pin) else []
         first: dict[tuple[str, bool], Event] = {}
         for event in events:
             for moved in event.moved:

@@ -145,7 +145,8 @@ def solve_row(
 
     ``ran()`` counts transients run so far, ``key_of`` names a trial; ``neighbours`` are rows already
     solved that say something of this one. ``converged`` is what the settings leave uncertain: of delays as
-    a fraction, of constraints in seconds; it widens the brackets. A point that cannot be measured has no value and its reason as status.
+    a fraction, of constraints in seconds; it widens the brackets. A point without an answer has no value and
+    its reason as status.
     """
     asked = axes or sheet.axes
     solver = _Row(
@@ -334,7 +335,7 @@ class _Row:
         return [row.hints[asked] for row in self.neighbours if asked in row.hints]
 
     def _setup(self, arc: Arc, clock_slew: float, data_slew: float) -> float | None:
-        """Return the setup of the same data edge at another point, where ``arc`` is a hold (or the like) and it is known."""
+        """Return the setup of the same data edge at another point, if ``arc`` is a hold or the like."""
         if arc.kind not in PARTNER:
             return None
         asked = (question(arc, PARTNER[arc.kind]), data_slew)

@@ -64,7 +64,8 @@ class Run:
 
     ``starting`` [s] is until the first job was given out, ``rows`` [s] from the end of the last preparation.
     ``by_purpose`` counts transients; ``settling`` are those that bring a cell to rest, with the second tries
-    of transients that did not converge, in the preparation and in the tables.
+    of transients that did not converge, in the preparation and in the tables. ``parts`` is where the time
+    [s] of all workers together went, by the run's own account.
     """
 
     result: RunResult
@@ -74,6 +75,7 @@ class Run:
     rows: float
     by_purpose: dict[str, int]
     most: int
+    parts: dict[str, float]
 
     @property
     def constraints(self) -> list[Answer]:
@@ -137,10 +139,10 @@ def measure(sheet: Sheet, workers: int) -> Run:
         folder = Path(name) / "run"
         before, began = _processor(), time.perf_counter()
         result = run_campaign(sheet, folder, workers)
-        ended, after = time.perf_counter(), _processor()
+        ended, after, finished = time.perf_counter(), _processor(), time.monotonic()
         stored = _stored(folder)
-    prepared = [at for job, _, at in watch.done if job.group is None]
-    labels = {job.label for job, _, _ in watch.done if job.group is None}
+    prepared = [(job, done, at) for job, done, at in watch.done if done.prepared is not None]
+    labels = {job.label for job, _, _ in prepared}
     preparing = [trial for label, trial in stored if label in labels]
     purposes = {"function_proof": 0, "rest": 0, "settings": 0} | Counter(
         _purpose(t, sheet) for t in preparing
@@ -150,20 +152,31 @@ def measure(sheet: Sheet, workers: int) -> Run:
     for answer in result.answers:
         name = "setup_hold" if answer.quantity in CONSTRAINTS else "delays" if _delay(answer) else "others"
         by_quantity[name] += answer.transients
-    in_preparation = sum(done.clock.transients for job, done, _ in watch.done if job.group is None)
+    in_preparation = sum(done.clock.transients for _, done, _ in prepared)
+    others = (done for _, done, _ in watch.done if done.prepared is None and done.row is None)
     settling = {
         "settling_preparation": in_preparation - len(preparing),
         "settling_tables": settled,
+        "model_proof": sum(done.clock.transients for done in others),
     }
     return Run(
         result,
         ended - began,
         after - before,
         watch.first - began,
-        ended - max(prepared),
+        ended - max(at for _, _, at in prepared),
         {**by_quantity, **purposes, **settling},
         most,
+        _parts(result, finished),
     )
+
+
+def _parts(result: RunResult, finished: float) -> dict[str, float]:
+    if result.timing is None:
+        return {}
+    report = result.timing.report(finished)
+    parts: dict[str, float] = report["all workers"] | report["main"]
+    return parts
 
 
 def _delay(answer: Answer) -> bool:
@@ -190,7 +203,7 @@ def _purpose(trial: dict[str, object], sheet: Sheet) -> str:
 
 
 def _settled(watch: Watch, stored: Counter[str]) -> tuple[int, int]:
-    """Return how many transients of the tables are no trials, and the most that one value may have cost.
+    """Return how many transients for setup and hold are no trials, and the most one value may have cost.
 
     Such transients settle the cell or repeat what did not converge. They are counted for each start and clock
     slew, and all of them are charged to the dearest setup or hold value there.
@@ -198,10 +211,10 @@ def _settled(watch: Watch, stored: Counter[str]) -> tuple[int, int]:
     extra: Counter[str] = Counter({label: -count for label, count in stored.items()})
     dearest: Counter[str] = Counter()
     for job, done, _ in watch.done:
-        if job.group is None or done.row is None:
+        if done.row is None:
             continue
         extra[job.label] += done.clock.transients
         own = (a.transients for a in done.row.answers if a.quantity in CONSTRAINTS)
         dearest[job.label] = max(dearest[job.label], *own, 0)
-    labels = {job.label for job, _, _ in watch.done if job.group is not None}
+    labels = [label for label, most in dearest.items() if most]
     return sum(extra[label] for label in labels), max(dearest[label] + extra[label] for label in labels)

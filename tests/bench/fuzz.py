@@ -235,7 +235,7 @@ def fuzz(name: str, count: int, seed: int, folder: Path, keep: Path | None = Non
         except CharflowError as error:
             str(error)
             tally.refused[type(error).__name__] += 1
-        except (Exception, Hang) as error:
+        except (Exception, SystemExit, Hang) as error:
             last = traceback.extract_tb(error.__traceback__)[-1]
             place = f"{Path(last.filename).name}:{last.lineno}"
             tally.failures.append(f"input {number}: {type(error).__name__} at {place}: {str(error)[:120]}")

@@ -411,6 +411,6 @@ def other_schema(data: bytes, chance: random.Random) -> bytes:
             with db:
                 db.execute(statement)
             db.close()
-        except sqlite3.Error:
+        except (sqlite3.Error, UnicodeDecodeError):
             return data
         return path.read_bytes()

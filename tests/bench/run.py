@@ -144,6 +144,7 @@ def breakdown(run: Run, values: list[Value]) -> dict[str, Any]:
         "load_s": clock.load,
         "loads": clock.loads,
         "starting_s": run.starting,
+        "time_parts_s": run.parts,
         "reltol": accuracy.settings.reltol,
         "rest_s": run.result.rests["typical"].seconds,
         "textbook_values": len(values),
@@ -190,7 +191,7 @@ def as_text(found: dict[str, Any]) -> str:
                 met = figure not in TARGETS or TARGETS[figure](name, value)
                 row += f"{'' if met else 'MISSED ':>10}{value:10.4g}"
             elif isinstance(value, dict):
-                row += "".join(f"\n    {part:32}{number:>20}" for part, number in value.items())
+                row += "".join(f"\n    {part:32}{number:>20.5g}" for part, number in value.items())
             else:
                 row += f"  {value}"
         lines.append(row)

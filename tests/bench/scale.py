@@ -1,4 +1,4 @@
-"""How the cost grows: with the number of points, with the size of the netlist, and a worker's memory over time.
+"""How the cost grows: with the number of points and the size of the netlist; a worker's memory over time.
 
     python tests/bench/scale.py [--json] [--quick] [--only points|elements|memory]
 
@@ -36,7 +36,7 @@ from charflow.solve.row import groups_of
 
 SLEWS = (10, 14, 20, 28, 40, 56, 80, 112, 160)  # ps; grids take the first n of each axis
 SIDES, SIDES_QUICK = (2, 3, 5, 7, 9), (2, 4, 6)
-PIECES, PIECES_QUICK = (0, 2, 4, 8, 16), (0, 4, 8)
+PIECES, PIECES_QUICK = (1, 2, 4, 8, 16), (1, 4, 8)
 TRIALS, TRIALS_QUICK = 5000, 600
 SETTLED = 0.2  # of the trials, whose growth (caches filling, the first waveforms) is not counted as a leak
 OHMS, FARADS = 120.0, 0.4e-15  # of one wire, shared by the pieces of its ladder
@@ -82,7 +82,12 @@ def points(quick: bool) -> dict[str, Any]:
                 "processor_ms_per_value": 1e3 * run.processor / len(run.result.answers),
             }
         )
-    return {"rows": rows, "exponent": exponent([r["values"] for r in rows], [r["rows_s"] for r in rows])}
+    sizes = [row["values"] for row in rows]
+    return {
+        "rows": rows,
+        "exponent": exponent(sizes, [row["rows_s"] for row in rows]),
+        "exponent_of_transients": exponent(sizes, [row["transients_in_tables"] for row in rows]),
+    }
 
 
 def elements(quick: bool) -> dict[str, Any]:
@@ -107,7 +112,7 @@ def extracted(cell: Cell, pieces: int, folder: Path) -> Sheet:
     sheet = cell.sheet(Grid((20, 80), (1, 5), 5), folder / "sheet.toml")
     lines: list[str] = []
     for line in sheet.cell.netlist.read_text(encoding="utf-8").splitlines():
-        if not pieces or not re.match(r"[Mm]\w+\s", line):
+        if not re.match(r"[Mm]\w+\s", line):
             lines.append(line)
             continue
         device, *nodes, bulk, model = line.split()[:6]

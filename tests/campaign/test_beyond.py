@@ -136,11 +136,13 @@ def test_axes_with_one_point_have_no_certificate_along_them(
     assert all(len(found.compared) == 4 for found in delays(line))
 
 
-def test_a_hole_in_a_table_is_told_from_an_error(formula_run: Run, sheet: Path) -> None:
-    result = formula_run(sheet, wish=Wish(4), fault="error", load=25)
+def test_a_hole_in_a_table_is_told_from_an_error(formula_run: Run, make_sheet: Callable[..., Path]) -> None:
+    wider = make_sheet(**{**AXES, "load": '["1 fF", "5 fF", "12 fF", "25 fF"]'})
+    result = formula_run(wider, wish=Wish(6), fault="die", load=12)
     lost = [found for found in delays(result) if found.table[6] == "Q"]
     assert any(check.read is None for found in lost for check in found.checks)
     assert all(check.error is None for found in lost for check in found.checks if check.read is None)
+    assert all(found.compared for found in lost)
 
 
 # ---------------------------------------------------------------- pruned models

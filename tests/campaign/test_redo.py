@@ -11,7 +11,7 @@ from typing import Any
 import pytest
 
 from charflow.campaign.facts import causes, facts_of
-from charflow.campaign.redo import CornerRedo, redo, redo_facts, redo_text
+from charflow.campaign.redo import UNPROVED, CornerRedo, redo, redo_facts, redo_text
 from charflow.campaign.store import FILE, Store
 from charflow.errors import FolderError
 from charflow.plan.circuit import circuit_of, read_sources
@@ -248,3 +248,29 @@ def test_the_command_answers_in_text_and_json(
     ran = run_cli("plan", tiny_sheet, "--against", tmp_path / "run", "--json")
     assert json.loads(ran.stdout)["redo"][0]["points"] == 18
     assert not (tmp_path / "run" / FILE).exists()
+
+
+def test_a_corner_known_to_need_the_whole_library_is_asked_with_it(
+    asked: Asked,
+    sheet_of: Callable[..., Path],
+    formula_run: Callable[..., Any],
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    sheet = sheet_of()
+    formula_run(sheet)
+    monkeypatch.setattr("charflow.simulate.proof.SMALL", 0)
+    assert all(found.causes[-1] == UNPROVED for found in asked(sheet).values())
+    monkeypatch.setattr(Store, "get", answers_differing(Store.get))
+    for found in asked(sheet).values():
+        assert found.causes == ("the models changed",)  # the whole ones are more than what the run pruned
+
+
+def answers_differing(get: Callable[..., Any]) -> Callable[..., Any]:
+    """Answer like the store, but say of every comparison of pruned models that it showed a difference."""
+
+    def answer(store: Store, table: str, key: str) -> Any:
+        found = get(store, table, key)
+        is_proof = table == "meta" and not key.startswith("facts") and found is None
+        return {"samples": 1, "difference": 0.5, "identical": False, "reason": ""} if is_proof else found
+
+    return answer

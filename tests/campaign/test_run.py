@@ -137,7 +137,9 @@ def test_an_unknown_corner_is_named_with_those_there_are(
 # ---------------------------------------------------------------- workers that fail
 
 
-@pytest.mark.parametrize("fault", ["die", "abort", "exit"])
+@pytest.mark.parametrize(
+    "fault", ["die", *(pytest.param(how, marks=pytest.mark.slow) for how in ("abort", "exit"))]
+)
 def test_a_worker_that_dies_once_changes_no_answer(
     formula_run: Callable[..., Any], sheet: Path, undisturbed: Any, tmp_path: Path, fault: str
 ) -> None:
@@ -146,7 +148,7 @@ def test_a_worker_that_dies_once_changes_no_answer(
     assert csv_of(result) == csv_of(undisturbed)
 
 
-@pytest.mark.parametrize("fault", ["die", "exit"])
+@pytest.mark.parametrize("fault", ["die", pytest.param("exit", marks=pytest.mark.slow)])
 def test_a_trial_that_always_kills_its_worker_costs_its_own_points_and_no_others(
     formula_run: Callable[..., Any],
     make_sheet: Callable[..., Path],
@@ -189,11 +191,14 @@ def test_a_worker_that_hangs_is_ended_after_the_limit_and_changes_no_answer(
     assert csv_of(result) == csv_of(undisturbed)
 
 
-@pytest.mark.parametrize(("fault", "reason"), [("error", "an index out of its range"), ("odd", "unforeseen")])
+@pytest.mark.parametrize(
+    ("fault", "reason"),
+    [("error", "an index out of its range"), pytest.param("odd", "unforeseen", marks=pytest.mark.slow)],
+)
 def test_an_error_nobody_foresaw_costs_its_rows_and_is_told(
     formula_run: Callable[..., Any], make_sheet: Callable[..., Path], fault: str, reason: str
 ) -> None:
-    result = formula_run(make_sheet(**FEWER), fault=fault, load=UNIQUE, count=tmp_path / "count")
+    result = formula_run(make_sheet(**FEWER), fault=fault, load=UNIQUE)
     lost = [answer for answer in result.answers if answer.value is None]
     assert 0 < len(lost) < len(result.answers)
     assert all(reason in answer.status or "died or hung twice" in answer.status for answer in lost)
@@ -209,7 +214,7 @@ def test_killing_workers_that_have_nothing_to_do_changes_no_answer(
         list(busy.new())
         children = {int(p.name.partition(".")[0]) for p in busy.folder.glob("*.journal")}
         for process in children - set(busy.busy) - set(killed):
-            if len(killed) < 3:
+            if len(killed) < 1:  # twice on one row would be its end
                 killed.append(process)
                 try:
                     os.kill(process, signal.SIGKILL)
@@ -262,7 +267,10 @@ def test_comments_layout_and_file_dates_redo_nothing(
 
 @pytest.mark.parametrize(
     ("axis", "longer"),
-    [("load", '["1 fF", "10 fF", "18 fF", "25 fF"]'), ("data_slew", '["10 ps", "50 ps", "90 ps"]')],
+    [
+        ("load", '["1 fF", "10 fF", "18 fF", "25 fF"]'),
+        pytest.param("data_slew", '["10 ps", "50 ps", "90 ps"]', marks=pytest.mark.slow),
+    ],
 )
 def test_a_longer_axis_repeats_no_delay_already_measured(
     formula_run: Callable[..., Any], make_sheet: Callable[..., Path], tmp_path: Path, axis: str, longer: str
@@ -356,7 +364,7 @@ def test_a_run_stopped_by_ctrl_c_keeps_what_is_done_and_goes_on_from_there(
     whole = formula_run(sheet, tell=told.append)
     assert not whole.interrupted
     assert csv_of(whole) == csv_of(undisturbed)
-    assert trials_in(tmp_path / "run") <= kept + told[-1].transients <= undisturbed.transients
+    assert kept + told[-1].transients == trials_in(tmp_path / "run") == undisturbed.transients
 
 
 def test_a_run_works_in_a_thread_that_gets_no_signals(

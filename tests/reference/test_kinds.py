@@ -1,9 +1,10 @@
 """Brute force on one Tarn cell of each kind: what charflow answers, found again the slow way.
 
 The check shares nothing with charflow but the netlists: its decks, edges and verdicts are written out
-here by hand, ngspice's own ``.measure`` does the measuring, a fixed 1 ps step and plain bisection the
-rest. Tolerance as for the sky130 brute force: 0.3 ps, of which bisection takes 0.05 ps and the 1 ps step,
-by halving it, up to 0.15 ps.
+here by hand, ngspice's own ``.measure`` does the measuring, steps of at most 2 ps at a tight tolerance and
+plain bisection the rest. The pauses are those of charflow's rest, 2 ns: nodes that float creep, and with
+another history the negative-edge cell's setup moves by 0.2 ps and more. Tolerance as for the sky130 brute
+force: 0.3 ps, of which bisection takes 0.05 ps.
 """
 
 from __future__ import annotations
@@ -26,7 +27,8 @@ pytestmark = [pytest.mark.slow, pytest.mark.ngspice]
 
 VDD = 1.2
 RAMP = 50e-12 / 0.6  # a 50 ps slew between 20 % and 80 %, from rail to rail
-PAUSE = 2e-9
+PAUSE = 2e-9  # charflow's rest, stated in the sheet
+AFTER = 0.9e-9
 LOAD = 5e-15
 Edge = tuple[str, float, int]  # pin, time of its 50 % point after the reference edge [s], level it goes to
 
@@ -52,21 +54,17 @@ class Scenario:
     from_: str | None = "CK"
     when: str = ""
     slew: str = "50 ps"
-    bracket: tuple[float, float] = (-150e-12, 400e-12)
+    bracket: tuple[float, float] = (-150e-12, 250e-12)
 
 
-FAR = 1.5e-9
+FAR = 2e-9
 SCENARIOS = (
     Scenario("tarn_dffn_1", Kind.SETUP, "D", True, "Q", 1, "CKN1 CKN0 CKN1",
              lambda x: (("D", -x, 1), ("CKN", 0, 0)), (("D", -FAR, 1), ("CKN", 0, 0)), "CKN"),
-    Scenario("tarn_dffn_1", Kind.HOLD, "D", False, "Q", 1, "CKN1 CKN0 CKN1 D1",
-             lambda x: (("CKN", 0, 0), ("D", x, 0)), (("CKN", 0, 0),), "CKN"),
     Scenario("tarn_dffcp_1", Kind.RECOVERY, "CLRN", True, "Q", 1, "D1",
              lambda x: (("CLRN", -x, 1), ("CK", 0, 1)), (("CLRN", -FAR, 1), ("CK", 0, 1))),
     Scenario("tarn_dffcp_1", Kind.REMOVAL, "CLRN", True, "Q", 0, "D1",
              lambda x: (("CK", 0, 1), ("CLRN", x, 1)), from_=None),
-    Scenario("tarn_dffsp_1", Kind.RECOVERY, "SET", False, "QN", 1, "SET1",
-             lambda x: (("SET", -x, 0), ("CK", 0, 1)), (("SET", -FAR, 0), ("CK", 0, 1))),
     Scenario("tarn_sdffp_1", Kind.SETUP, "SI", True, "Q", 1, "CK1 CK0 SE1",
              lambda x: (("SI", -x, 1), ("CK", 0, 1)), (("SI", -FAR, 1), ("CK", 0, 1)), when="!D & SE"),
     Scenario("tarn_edffp_1", Kind.SETUP, "E", True, "Q", 1, "E1 CK1 CK0 E0 D1",
@@ -84,7 +82,8 @@ SCENARIOS = (
     Scenario("tarn_dyn_1", Kind.SETUP, "D", True, "Q", 1, "CK1 CK0",
              lambda x: (("D", -x, 1), ("CK", 0, 1)), (("D", -FAR, 1), ("CK", 0, 1))),
     Scenario("tarn_dffp_1", Kind.PULSE_WIDTH, "CK", True, "Q", 1, "CK1 CK0 D1",
-             lambda x: (("CK", 0, 1), ("CK", x, 0)), (("CK", 0, 1),), slew="10 ps", bracket=(17e-12, 400e-12)),
+             lambda x: (("CK", 0, 1), ("CK", x, 0)), (("CK", 0, 1),),
+             slew="10 ps", bracket=(17e-12, 250e-12)),
 )  # fmt: skip
 
 
@@ -154,8 +153,9 @@ def _bisect(scenario: Scenario, folder: Path) -> float:
 def _delay(scenario: Scenario, edges: tuple[Edge, ...], folder: Path) -> float | None:
     """Return the delay [s] of the output's only crossing, None if it does not end where it should."""
     half = VDD / 2
-    zero, end = _zero(scenario), _zero(scenario) + FAR
-    begin = zero - 1.8e-9
+    zero = _zero(scenario, edges)
+    end = zero + AFTER
+    begin = zero - 0.5e-9
     first = next(edge for edge in edges if edge[0] == scenario.from_)
     word = "rise" if scenario.goes else "fall"
     said = _run(
@@ -177,16 +177,18 @@ def _excursion(scenario: Scenario, edges: tuple[Edge, ...], folder: Path) -> flo
     said = _run(
         scenario,
         edges,
-        f".measure tran peak {what} v({scenario.output}) from={_zero(scenario) - 0.5e-9:.12g} "
-        f"to={_zero(scenario) + FAR:.12g}\n",
+        f".measure tran peak {what} v({scenario.output}) from={_zero(scenario, edges) - 0.5e-9:.12g} "
+        f"to={_zero(scenario, edges) + AFTER:.12g}\n",
         folder,
     )
     peak = float(re.findall(r"^peak\s*=\s*([-+.\deE]+)", said, re.MULTILINE)[0]) / VDD
     return 1 - peak if scenario.goes else peak
 
 
-def _zero(scenario: Scenario) -> float:
-    return PAUSE * (len(scenario.before.split()) + 2)
+def _zero(scenario: Scenario, edges: tuple[Edge, ...]) -> float:
+    """Return when [s] the reference edge comes: one pause after the last step before it."""
+    steps = len(scenario.before.split()) + sum(at == -FAR for _, at, _ in edges)
+    return PAUSE * (steps + 1) + 0.1e-9
 
 
 def _run(scenario: Scenario, edges: tuple[Edge, ...], measures: str, folder: Path) -> str:
@@ -195,7 +197,7 @@ def _run(scenario: Scenario, edges: tuple[Edge, ...], measures: str, folder: Pat
     assert ports
     pins = ports[1].split()
     outputs = {"Q", "QN", "GCK", "Q0", "Q1"} & set(pins)
-    zero, ramp = _zero(scenario), float(scenario.slew.split()[0]) * 1e-12 / 0.6
+    zero, ramp = _zero(scenario, edges), float(scenario.slew.split()[0]) * 1e-12 / 0.6
     moves: dict[str, list[tuple[float, int]]] = {pin: [] for pin in pins}
     for number, step in enumerate(scenario.before.split(), start=1):
         moves[step[:-1]].append((number * PAUSE, int(step[-1])))
@@ -215,9 +217,9 @@ def _run(scenario: Scenario, edges: tuple[Edge, ...], measures: str, folder: Pat
         else:
             lines.append(f"v{pin} {pin} 0 pwl({_pwl(moves[pin], ramp)})")
     lines += [
-        ".options reltol=1e-5 trtol=1",
+        ".options reltol=1e-6 trtol=1",
         ".temp 25",
-        f".tran 1p {zero + FAR + 1e-12:.12g} 0 1p",
+        f".tran 2p {zero + AFTER + 2e-12:.12g} 0 2p",
         measures,
         ".end",
     ]

@@ -103,6 +103,15 @@ def test_points_of_the_grid_and_points_without_an_answer_are_not_compared() -> N
     assert len(found.compared) == 1
 
 
+def test_a_whole_line_of_holes_is_not_read_across() -> None:
+    def curve(x: float, y: float) -> float | None:
+        return None if y == 5e-15 else 1e-10
+
+    (found,) = certify(table(Kind.CLK_TO_Q, curve), between(Kind.CLK_TO_Q, curve, (30e-12, 3e-15)))
+    assert [check.read for check in found.checks] == [None]
+    assert found.along == ("clock_slew", "load")
+
+
 def test_a_table_of_one_point_along_an_axis_says_so() -> None:
     def curve(x: float, y: float) -> float:
         return 1e-10 + x

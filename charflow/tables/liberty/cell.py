@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 from charflow.plan.behaviour import Behaviour
@@ -17,6 +17,14 @@ from charflow.tables.liberty.function import (
     output_function,
     sequential,
     state_table,
+)
+from charflow.tables.liberty.limits import largest_load, largest_slew
+from charflow.tables.liberty.power import (
+    PowerWriter,
+    capacitance_items,
+    input_power,
+    leakage_items,
+    output_power,
 )
 from charflow.tables.liberty.scan import scan_level, test_cell
 from charflow.tables.liberty.syntax import Block, Complex, Simple
@@ -42,7 +50,7 @@ class CellFacts:
     rows: tuple[Row, ...]
 
 
-def cell_block(facts: CellFacts, writer: Writer) -> Block:
+def cell_block(facts: CellFacts, writer: Writer, power: PowerWriter) -> Block:
     """Return the cell group."""
     sheet, cell = facts.sheet, facts.cell
     names = names_of(cell, tuple(sheet.pins))
@@ -59,9 +67,11 @@ def cell_block(facts: CellFacts, writer: Writer) -> Block:
         items.append(Block("pin", (node,), internal))
     else:
         items += sequential(cell, names)
-    for pin in (*sheet.inputs, *sheet.outputs):
-        inside = _input if pin in sheet.inputs else _output
-        items.append(Block("pin", (pin,), tuple(inside(facts, writer, names, pin, kind))))
+    items += leakage_items(power)
+    for pin in sheet.inputs:
+        items.append(Block("pin", (pin,), tuple(_input(facts, writer, power, pin, kind))))
+    for pin in sheet.outputs:
+        items.append(Block("pin", (pin,), tuple(_output(facts, writer, power, names, pin, kind))))
     if scan_level(sheet, cell) is not None:
         items.append(test_cell(sheet, cell, names))
     return Block("cell", (facts.name,), tuple(items))
@@ -81,7 +91,7 @@ def _related_supplies(sheet: Sheet) -> Iterator[Simple]:
             yield Simple(f"related_{word}_pin", pins[0])
 
 
-def _input(facts: CellFacts, writer: Writer, names: Names, pin: str, kind: str) -> Iterator[Item]:
+def _input(facts: CellFacts, writer: Writer, power: PowerWriter, pin: str, kind: str) -> Iterator[Item]:
     sheet, cell = facts.sheet, facts.cell
     yield Simple("direction", "input")
     yield from _related_supplies(sheet)
@@ -93,13 +103,20 @@ def _input(facts: CellFacts, writer: Writer, names: Names, pin: str, kind: str) 
         yield Simple(f"clock_gate_{word}_pin", True)
     elif not cell.transparent and pin in cell.data_pins and role in _NEXT_STATE_TYPE:
         yield Simple("nextstate_type", _NEXT_STATE_TYPE[role])
+    yield from capacitance_items(power, pin)
+    slew = largest_slew(cell, facts.rows, pin)
+    if slew is not None:
+        yield Simple("max_transition", slew)
     widths = list(width_items(writer, facts.rows, pin))
     yield from (item for item in widths if isinstance(item, Simple))
     yield from constraint_groups(writer, facts.rows, pin)
     yield from (item for item in widths if not isinstance(item, Simple))
+    yield from input_power(power, pin)
 
 
-def _output(facts: CellFacts, writer: Writer, names: Names, pin: str, kind: str) -> Iterator[Item]:
+def _output(
+    facts: CellFacts, writer: Writer, power: PowerWriter, names: Names, pin: str, kind: str
+) -> Iterator[Item]:
     yield Simple("direction", "output")
     yield from _related_supplies(facts.sheet)
     shows = dict(facts.cell.outputs)[pin]
@@ -109,9 +126,8 @@ def _output(facts: CellFacts, writer: Writer, names: Names, pin: str, kind: str)
             yield Simple("clock_gate_out_pin", True)
     else:
         yield Simple("function", output_function(facts.cell, names, pin))
+    load = largest_load(facts.rows, pin)
+    if load is not None:
+        yield Simple("max_capacitance", load)
     yield from delay_groups(writer, facts.rows, pin)
-
-
-def facts_rows(rows: Sequence[Row], corner: str) -> tuple[Row, ...]:
-    """Return the rows of one corner."""
-    return tuple(row for row in rows if row.corner == corner)
+    yield from output_power(power, pin)

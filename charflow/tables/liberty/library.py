@@ -19,8 +19,10 @@ from charflow.tables.folder import Tables, read_tables
 from charflow.tables.liberty.cell import CellFacts, cell_block
 from charflow.tables.liberty.check import liberty_check
 from charflow.tables.liberty.lookup import Gaps, Templates
+from charflow.tables.liberty.power import PowerWriter
 from charflow.tables.liberty.syntax import Block, Complex, Simple, render
 from charflow.tables.liberty.timing import Writer
+from charflow.tables.power import PowerRow, read_power
 from charflow.tables.text import CAUTION
 
 
@@ -31,6 +33,7 @@ class Measured:
     folder: Path
     sheet: Sheet
     tables: Tables
+    power: tuple[PowerRow, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -63,7 +66,7 @@ def read_measured(folder: Path) -> Measured:
         ) from None
     except (ValueError, KeyError, TypeError, AttributeError) as error:
         raise FolderError(f"this is not the copy of a sheet: {error!r}", where=(str(path),)) from None
-    return Measured(folder, sheet_from(raw, path, text), tables)
+    return Measured(folder, sheet_from(raw, path, text), tables, read_power(folder))
 
 
 def library_texts(folders: Sequence[Path], name: str, *, allow_gaps: bool = False) -> list[Library]:
@@ -100,7 +103,7 @@ def _check_cells(measured: Sequence[Measured]) -> None:
 
 
 def _library(measured: Sequence[Measured], name: str, corner: str, gaps: Gaps) -> Library:
-    templates = Templates()
+    templates, powers = Templates(), Templates("power_lut_template", "power_over")
     absent, cells, sheets = [], [], []
     for item in measured:
         rows = tuple(row for row in item.tables.rows if row.corner == corner)
@@ -111,9 +114,13 @@ def _library(measured: Sequence[Measured], name: str, corner: str, gaps: Gaps) -
         load = round(item.sheet.axes.constraint_load * 1e15, 6)
         writer = Writer(cell, item.tables.cell, load, templates, gaps)
         sheets.append((item.tables.cell, item.sheet))
-        cells.append(cell_block(CellFacts(item.tables.cell, item.sheet, cell, rows), writer))
+        power = tuple(row for row in item.power if row.corner == corner)
+        facts = CellFacts(item.tables.cell, item.sheet, cell, rows)
+        cells.append(cell_block(facts, writer, PowerWriter(item.tables.cell, power, powers, gaps)))
     gaps.finish()
-    block = Block("library", (name,), (*_header(sheets, corner), *templates.blocks(), *cells))
+    block = Block(
+        "library", (name,), (*_header(sheets, corner), *templates.blocks(), *powers.blocks(), *cells)
+    )
     problems = liberty_check(block)
     if problems:
         raise InputError(

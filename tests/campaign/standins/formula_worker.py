@@ -3,8 +3,8 @@
 ``FORMULA_PACE`` [s] is slept at each trial. ``FORMULA_FAULT`` is what happens at the trials named by
 ``FORMULA_LOAD`` (the load of Q in fF, of trials in which the clock alone moves): ``die``, ``abort``,
 ``exit``, ``hang``, ``error`` or ``odd``. With
-``FORMULA_ONCE`` (a file) it happens only while that does not exist; ``FORMULA_COUNT`` (a file) grows by a byte
-each time.
+``FORMULA_ONCE`` (a file) it happens only while that does not exist; ``FORMULA_COUNT`` (a file) grows by a
+byte each time.
 ``FORMULA_SLOWER`` [s] is added to every delay. ``FORMULA_VERSION`` is the simulator's.
 ``FORMULA_BENT`` [1/s] times the square of the clock slew is added to every delay. ``FORMULA_APART`` [V] is
 how far pruned models are from the whole library.
