@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from charflow import __version__
-from charflow.errors import CharflowError, InputError
+from charflow.errors import CharflowError, InputError, visible
 
 if TYPE_CHECKING:
     from charflow.campaign.beyond import Wish
@@ -34,7 +34,7 @@ class _Commands(click.Group):
         except BrokenPipeError:
             sys.exit(1)
         except OSError as error:  # all others are explained where they happen
-            click.echo(f"charflow: cannot go on: {error}", err=True)
+            click.echo(f"charflow: cannot go on: {visible(str(error))}", err=True)
             sys.stdout = None  # or Python complains about it once more at the end
             sys.exit(1)
 
@@ -176,16 +176,16 @@ def _report(sheet: Sheet, result: RunResult, tables: Tables, out: Path) -> None:
     from charflow.tables.text import CAUTION, print_tables
 
     console = Console(soft_wrap=True, highlight=False)
-    click.echo(f"{tables.cell}")
+    click.echo(visible(tables.cell))
     for line in tables.conditions:
-        click.echo(f"  {line}")
+        click.echo(f"  {visible(line)}")
     print_tables(console, tables.rows)
     print_certificate(console, tables.facts.get("certificate", ()))
     for name, facts in tables.facts["corners"].items():
         click.echo(f"{name}: {facts['models_proved']}")
     click.echo(
         f"{len(result.answers)} values, {result.failed} without an answer; "
-        f"{result.transients} transients in {result.seconds:.1f} s. Written to {out}/"
+        f"{result.transients} transients in {result.seconds:.1f} s. Written to {visible(str(out))}/"
     )
     click.echo(CAUTION)
     if result.interrupted:
@@ -281,8 +281,8 @@ def draft(
     wanted = Wanted(
         subckt, models, supply, temperature, compatibility, option_values(options), tuple(folders)
     )
-    marked = draft_to(netlist, out, wanted, lambda text: click.echo(f"charflow: {text}", err=True))
-    click.echo(f"Written to {out}; read it before you trust it.")
+    marked = draft_to(netlist, out, wanted, lambda text: click.echo(f"charflow: {visible(text)}", err=True))
+    click.echo(f"Written to {visible(str(out))}; read it before you trust it.")
     if marked:
         click.echo(f"Lines marked NOT SURE or FILL IN: {marked}.")
 

@@ -8,6 +8,7 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 
 from charflow.campaign.run import Progress
+from charflow.errors import visible
 
 Tell = Callable[[Progress], None]
 Say = Callable[[str], None]
@@ -44,7 +45,7 @@ def live() -> Iterator[tuple[Tell, Say]]:
         with Live(Text(""), console=console, transient=True, refresh_per_second=5) as display:
             yield (
                 lambda progress: display.update(Text(line(progress))),
-                lambda text: console.print(Text(text)),
+                lambda text: console.print(Text(visible(text))),
             )
         return
     last = [time.monotonic()]
@@ -55,4 +56,4 @@ def live() -> Iterator[tuple[Tell, Say]]:
             last[0] = time.monotonic()
             print(line(progress), file=sys.stderr, flush=True)
 
-    yield tell, lambda text: print(text, file=sys.stderr, flush=True)
+    yield tell, lambda text: print(visible(text), file=sys.stderr, flush=True)

@@ -10,7 +10,7 @@ from typing import Any
 import pytest
 
 BENCH = Path(__file__).parent / "bench"
-COUNTS = {"sheet": 150, "netlist": 250, "csv": 150, "json": 100, "store": 25, "compare": 40}
+COUNTS = {"sheet": 150, "netlist": 90, "csv": 120, "json": 100, "store": 25, "compare": 40}
 
 
 @pytest.fixture(scope="module")
@@ -27,7 +27,8 @@ def test_spoilt_inputs_are_read_or_refused(bench: Any, target: str, tmp_path: Pa
     assert tally.failures == []
     assert tally.inputs == COUNTS[target]
     assert tally.accepted > 0
-    assert sum(tally.refused.values()) > 0
+    assert tally.accepted + sum(tally.refused.values()) == tally.inputs
+    assert tally.refused or target == "store"  # a damaged store is set aside, seldom refused
 
 
 def test_every_target_of_the_bench_is_here(bench: Any) -> None:

@@ -91,6 +91,8 @@ def write_files(work: Path, decks: Path, **names: str) -> Path | None:
     netlist = re.sub(r"\bD\b", lambda _: calm["pin"], netlist)
     models = f".lib tt\n.lib '{decks}/tarn130.lib' tt\n.endl\n"
     sheet = work / names.get("sheet", "sheet.toml")
+    if sheet.parent != work:  # this names another place, which is the user's to name
+        return None
     try:
         for path, text in ((work / calm["netlist"], netlist), (work / calm["models"], models)):
             if not path.exists() and path.parent == work:
@@ -183,8 +185,11 @@ def test_names_in_a_table_from_elsewhere_are_printed_and_drawn_as_they_are(work:
                 names = [name, "setup", name, "rise", name, "rise", "", "", name]
                 writer.writerow([*names, slew, "10", "5", value, "0.1", name, "3", name])
     assert called("compare", "old.csv", "new.csv", "--limit", "2%").exit_code == 1
-    facts = json.loads(called("compare", "old.csv", "new.csv", "--json", "--picture", "c.svg").output)
+    facts = json.loads(called("compare", "old.csv", "new.csv", "--json").output)
     assert {change["pin"] for change in facts["changes"]} == {name}
+    if not set(name) & set("<$\x1b\n"):  # a picture takes a second
+        return
+    called("compare", "old.csv", "new.csv", "--picture", "c.svg")
     tree = ElementTree.fromstring((work / "c.svg").read_bytes())
     assert not [node for node in tree.iter() if node.tag.rpartition("}")[2] in ("script", "a", "image")]
 

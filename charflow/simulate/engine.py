@@ -82,7 +82,7 @@ class Engine:
         """Return the settled node voltages [V] of ``start``, running the settling transient on first use."""
         if start not in self.settled:
             errors: list[TrialError] = []
-            for settings in ladder(self.settings):
+            for settings in ladder(STANDARD):  # the same for all settings, so that no answer depends on them
                 try:
                     self.settled[start] = self._settle(start, settings)
                     break

@@ -140,7 +140,9 @@ def _taught(sheet: Sheet, probes: Sequence[_Probe]) -> RowResult:
 
 
 def _relative(a: Reference, b: Reference) -> float:
+    """Return how far delays and transitions of two references differ, relative, small ones to a floor."""
     return max(
-        abs(a.delays[pin] - b.delays[pin]) / max(abs(b.delays[pin]), DELAY_FLOOR / DELAY_SHARE)
-        for pin in b.delays
+        abs(before[pin] - now[pin]) / max(abs(now[pin]), DELAY_FLOOR / DELAY_SHARE)
+        for before, now in ((a.delays, b.delays), (a.transitions, b.transitions))
+        for pin in now
     )

@@ -22,8 +22,8 @@ def reference(evaluate: Evaluate, sheet: Sheet, arc: Arc, condition: Condition) 
 
     Raises :class:`TrialError` where an output does not move that should, or one moves that should stay.
     """
-    slews = (condition.clock_slew or 0.0, condition.data_slew or 0.0)
-    until = FIRST_WINDOW + ramp_time(max(slews), sheet.measure.slew_fractions) / 2
+    (move,) = relaxed(sheet, arc, condition, 0.0).moves
+    until = FIRST_WINDOW + ramp_time(move.slew, sheet.measure.slew_fractions) / 2
     while True:
         outcome = evaluate(relaxed(sheet, arc, condition, until))
         for pin, rising in arc.observed:

@@ -284,7 +284,8 @@ class _Row:
             return None
         values = {slew: hint.value for slew, hint in here.items()}
         if len(values) > 1:
-            return Guess(between(data_slew, values), 2 * slope, slope, like.shape)
+            gap = abs(max(values.values()) - min(values.values()))
+            return Guess(between(data_slew, values), max(2 * slope, 0.1 * gap), slope, like.shape)
         (slew, value), *_ = values.items()
         later = data_slew - slew if arc.kind in BEFORE else slew - data_slew
         return Guess(value + DATA_SLEW_SHARE * later, 2 * slope + 0.15 * abs(later), slope, like.shape)

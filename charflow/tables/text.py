@@ -7,6 +7,7 @@ import re
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
+from charflow.errors import visible
 from charflow.tables.certificate import to_markdown as certificate_lines
 from charflow.tables.flat import Row
 from charflow.tables.grid import Grid, axis_unit, grids_of, worst_of
@@ -107,7 +108,7 @@ def print_tables(console: Console, rows: Sequence[Row]) -> None:
 
     for grid in _shown(rows):
         table = Table(
-            title=Text(f"{grid.corner}: {grid.title} [ps]"),
+            title=Text(visible(f"{grid.corner}: {grid.title} [ps]")),
             title_justify="left",
             box=box.SIMPLE_HEAD,
             title_style="",
@@ -121,5 +122,7 @@ def print_tables(console: Console, rows: Sequence[Row]) -> None:
     for row in rows:
         if row.value_ps is None:
             console.print(
-                Text(f"no value: {row.quantity} {row.pin or row.output} at {row.corner}: {row.status}")
+                Text(
+                    visible(f"no value: {row.quantity} {row.pin or row.output} at {row.corner}: {row.status}")
+                )
             )

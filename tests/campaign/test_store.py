@@ -143,6 +143,20 @@ def test_one_flipped_digit_of_a_kept_number_is_noticed_and_costs_that_entry_only
     assert found == {key: value for key, value in EXPECTED.items() if key != "row5"}
 
 
+@pytest.mark.parametrize("readonly", [False, True])
+def test_damage_that_sqlite_cannot_even_quote_is_damage(tmp_path: Path, readonly: bool) -> None:
+    whole = filled(tmp_path).read_bytes()
+    damaged = whole.replace(b"CREATE TABLE trials", b"CREATE TABLE tri\x88\xff ", 1)
+    if readonly:
+        (tmp_path / FILE).write_bytes(damaged)
+        with pytest.raises(FolderError, match="cannot be opened"):
+            Store(tmp_path, readonly=True)
+    else:
+        found, said = opened_after_damage(tmp_path, damaged)
+        assert "is damaged" in said[0]
+        assert truly_kept(found)
+
+
 def test_what_was_not_yet_checkpointed_survives_the_process(tmp_path: Path) -> None:
     store = Store(tmp_path)
     store.add_trials(TRIALS)

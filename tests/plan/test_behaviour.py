@@ -8,7 +8,7 @@ from itertools import pairwise
 import pytest
 
 from charflow.errors import SheetError
-from charflow.plan.behaviour import Behaviour, Bits, behaviour_of
+from charflow.plan.behaviour import MOST_LEVELS, Behaviour, Bits, behaviour_of
 from charflow.plan.trial import Start
 from charflow.sheet import Sheet
 
@@ -193,3 +193,10 @@ class TestWrong:
             behaviour_of(sheet_of(pins | change, **cell))
         assert said in caught.value.message
         assert caught.value.where[-1] == "cell.toml"
+
+
+def test_more_inputs_and_bits_than_can_be_worked_through_are_refused_at_once(sheet_of: MakeSheet) -> None:
+    pins = {f"D{n}": {"role": "data"} for n in range(40)}
+    rest = {"CK": {"role": "clock", "active": "rise"}, "Q": {"role": "output", "shows": "state"}}
+    with pytest.raises(SheetError, match=rf"41 inputs and 1 stored bits; at most {MOST_LEVELS} together"):
+        behaviour_of(sheet_of(pins | rest, next_state=" & ".join(pins)))

