@@ -6,9 +6,11 @@ the answers of the others as they are.
 
 from __future__ import annotations
 
+import hashlib
 from collections.abc import Collection
 from dataclasses import dataclass
 
+from charflow.plan.circuit import Circuit
 from charflow.sheet import Axes, Sheet
 from charflow.solve.order import ends_then_middles
 from charflow.solve.row import Group, groups_of
@@ -29,6 +31,7 @@ class Node:
     after: tuple[str, ...]
     points: int
     losses: int = 0
+    trials: int = 0
     axes: Axes | None = None
     proves: bool = False
 
@@ -59,3 +62,12 @@ def nodes_of(sheet: Sheet, corners: tuple[str, ...], unproved: Collection[str] =
 def row_label(corner: str, group: int, clock_slew: float) -> str:
     """Return what people call a row."""
     return f"{corner}: group {group + 1}, slew {clock_slew * 1e12:g} ps"
+
+
+def trial_label(circuit: Circuit, group: Group | None = None, clock_slew: float = 0.0) -> str:
+    """Return the label trials are kept under: what stays the same when axes or pushout change.
+
+    Without a group, it is that of the trials which prepare a corner.
+    """
+    facts = (circuit.digest, repr(group and group.start), repr(clock_slew))
+    return hashlib.sha256("\n".join(facts).encode()).hexdigest()[:24]

@@ -7,9 +7,10 @@ import time
 from collections.abc import Callable, Collection, Iterator
 from concurrent.futures import FIRST_COMPLETED, Future, wait
 from dataclasses import asdict, replace
+from typing import Any
 
 from charflow.campaign.codec import accuracy_from, accuracy_to, row_from, row_to
-from charflow.campaign.graph import Node, nodes_of
+from charflow.campaign.graph import Node, nodes_of, trial_label
 from charflow.campaign.pool import Pool, kill
 from charflow.campaign.state import Campaign, ModelsDifferError, Progress
 from charflow.campaign.worker import Done, Job
@@ -18,7 +19,7 @@ from charflow.probe.rest import Rest
 from charflow.simulate.proof import Proof
 from charflow.solve.accuracy import Accuracy
 from charflow.solve.between import hints_at
-from charflow.solve.row import Group, RowResult, lost_row
+from charflow.solve.row import RowResult, lost_row
 
 __all__ = ["Campaign", "ModelsDifferError", "Progress", "absorb", "drive"]
 
@@ -102,7 +103,7 @@ def recall(campaign: Campaign, unproved: Collection[str] = ()) -> list[tuple[Nod
 def trials_kept(campaign: Campaign, corner: str) -> int:
     """Return how many transients of this cell at ``corner`` the store has for the rows of the sheet."""
     nodes = [node for node in nodes_of(campaign.sheet, campaign.corners) if node.corner == corner]
-    labels = {_trial_label(campaign, corner, node.group, node.clock_slew) for node in nodes}
+    labels = {trial_label(campaign.circuits[corner], node.group, node.clock_slew) for node in nodes}
     return sum(len(campaign.store.outcomes(label)) for label in labels)
 
 
@@ -170,22 +171,17 @@ def _key(campaign: Campaign, node: Node) -> str:
     return key
 
 
-def _trial_label(campaign: Campaign, corner: str, group: Group | None = None, clock_slew: float = 0.0) -> str:
-    """Return the label trials are kept under: what stays the same when axes or pushout change.
-
-    Without a group, it is that of the trials which prepare a corner.
-    """
-    facts = (campaign.circuits[corner].digest, repr(group and group.start), repr(clock_slew))
-    return hashlib.sha256("\n".join(facts).encode()).hexdigest()[:24]
+def _known_trials(campaign: Campaign, node: Node) -> dict[str, Any]:
+    """Return the outcomes (JSON) a job may need: rows repeat trials of the preparation, and of each other."""
+    circuit = campaign.circuits[node.corner]
+    labels = {trial_label(circuit)}
+    if node.group is not None:
+        labels |= {trial_label(circuit, group, node.clock_slew) for group in campaign.groups}
+    return {key: outcome for name in sorted(labels) for key, outcome in campaign.store.outcomes(name).items()}
 
 
 def _job(campaign: Campaign, node: Node) -> Job:
-    label = _trial_label(campaign, node.corner, node.group, node.clock_slew)
-    known = campaign.store.outcomes(label)
-    if node.group is not None:  # rows repeat some trials of the preparation, and of each other
-        others = {_trial_label(campaign, node.corner, group, node.clock_slew) for group in campaign.groups}
-        for other in sorted(others | {_trial_label(campaign, node.corner)}):
-            known |= campaign.store.outcomes(other)
+    label = trial_label(campaign.circuits[node.corner], node.group, node.clock_slew)
     known_rows = [campaign.rows[name] for name in node.after if name in campaign.rows]
     if node.axes is not None:
         known_rows = [hints_at(known_rows, node.clock_slew, node.axes.data_slew)]
@@ -200,7 +196,7 @@ def _job(campaign: Campaign, node: Node) -> Job:
         group=node.group,
         clock_slew=node.clock_slew,
         neighbours=tuple(known_rows),
-        known=known,
+        known=_known_trials(campaign, node),
         poisoned=frozenset(key for key, count in campaign.deaths.items() if count > 1),
         axes=node.axes,
         full=campaign.whole[node.corner] if node.proves else None,
@@ -239,8 +235,13 @@ def _settle(campaign: Campaign, node: Node, future: Future[Done]) -> bool:
 
 
 def _lost(campaign: Campaign, node: Node, error: Exception) -> bool:
-    """Note which trial a dead worker was at; the job runs again, the trial at most once more."""
-    node.losses += 1
+    """Note which trial a dead worker was at; the job runs again, the trial at most once more.
+
+    A job that lost its worker between trials runs again as long as it gets further each time.
+    """
+    known = len(_known_trials(campaign, node))
+    node.losses = 1 if known > node.trials else node.losses + 1
+    node.trials = known
     culprit = next((trial for job, trial in campaign.follower.busy.values() if job == node.label), "")
     campaign.follower.busy = {p: v for p, v in campaign.follower.busy.items() if v[0] != node.label}
     if culprit:

@@ -120,12 +120,19 @@ _WAYS: dict[Behaviour, dict[tuple[Bits, Levels], Start]] = {}
 
 
 def _search(cell: Behaviour) -> dict[tuple[Bits, Levels], Start]:
-    """Breadth-first search over (state, inputs) from every vector with nothing known."""
+    """Breadth-first search over (state, inputs) from every vector with the cell closed and nothing known.
+
+    Each way begins with the control pin moving once: nodes that nothing drives then have the history of a
+    running clock, not the infinite age of an operating point.
+    """
     ways: dict[tuple[Bits, Levels], Start] = {}
     queue: deque[tuple[Bits, dict[str, bool], Start]] = deque()
     for vector in cell.vectors():
-        state = cell.after(cell.unknown, vector, vector)
-        queue.append((state, vector, Start((levels(vector),))))
+        if vector[cell.control] is cell.active_high:
+            continue
+        other = {**vector, cell.control: not vector[cell.control]}
+        state = cell.after(cell.unknown, other, vector)
+        queue.append((state, vector, Start((levels(other), levels(vector)))))
     while queue:
         state, vector, start = queue.popleft()
         key = (state, levels(vector))

@@ -171,3 +171,12 @@ def nudged(trial: Trial, settings: Settings) -> Trial:
         for move in trial.moves
     )
     return Trial(trial.corner, trial.start, moves, trial.loads, trial.until)
+
+
+def spiceinit(compatibility: str | None) -> str:
+    """Return the ``.spiceinit`` to lay beside a deck: the compatibility mode its models want, and one thread.
+
+    Several threads make a circuit as small as a cell several times slower.
+    """
+    mode = f"set ngbehavior={compatibility}\n" if compatibility else ""
+    return f"{mode}set ng_nomodcheck\nset num_threads=1\n"

@@ -10,7 +10,7 @@ from typing import Any
 from charflow.errors import FolderError, SheetError
 from charflow.plan.arcs import DELAYS, WIDTHS, Arc, Kind, edge_name
 from charflow.plan.circuit import Circuit, circuit_of, read_sources
-from charflow.plan.deck import Settings, deck
+from charflow.plan.deck import Settings, deck, spiceinit
 from charflow.plan.derive import arcs_of
 from charflow.plan.stimulus import Condition, at_offset, ramp_time, relaxed
 from charflow.plan.trial import Trial
@@ -43,10 +43,7 @@ def write_decks(sheet: Sheet, folder: Path) -> dict[str, Any]:
                 where=(str(sheet.path),),
             )
         mode = modes.pop()
-        if mode:
-            (folder / ".spiceinit").write_text(
-                f"set ngbehavior={mode}\nset ng_nomodcheck\n", encoding="utf-8"
-            )
+        (folder / ".spiceinit").write_text(spiceinit(mode), encoding="utf-8")
         count = 0
         for corner in sheet.corners:
             circuit = circuit_of(sheet, sources, corner)

@@ -12,7 +12,7 @@ import numpy as np
 
 from charflow.errors import LoadError, SimulatorError, TrialTimeout
 from charflow.plan.circuit import Circuit
-from charflow.plan.deck import Settings, deck, nudged, span
+from charflow.plan.deck import Settings, deck, nudged, span, spiceinit
 from charflow.plan.trial import Outcome, Trial
 from charflow.simulate.library import environment, find_executable, private_folder
 from charflow.simulate.messages import load_error, run_error
@@ -29,8 +29,7 @@ def run_deck(text: str, compatibility: str | None, limit: float = 600.0) -> tupl
     with tempfile.TemporaryDirectory(dir=private_folder()) as name:
         folder = Path(name)
         (folder / "trial.cir").write_text(text, encoding="utf-8")
-        if compatibility:
-            (folder / ".spiceinit").write_text(spiceinit(compatibility), encoding="utf-8")
+        (folder / ".spiceinit").write_text(spiceinit(compatibility), encoding="utf-8")
         try:
             done = subprocess.run(
                 [executable, "-b", "-r", "trial.raw", "trial.cir"],
@@ -54,11 +53,6 @@ def run_deck(text: str, compatibility: str | None, limit: float = 600.0) -> tupl
             loaded = raw.exists() or re.search("singular|timestep|operating point", said, re.IGNORECASE)
             raise run_error(lines) if loaded else load_error(lines)
         return read_raw(raw), said
-
-
-def spiceinit(compatibility: str) -> str:
-    """Return the ``.spiceinit`` that a deck needs beside it where the models want a compatibility mode."""
-    return f"set ngbehavior={compatibility}\nset ng_nomodcheck\nset num_threads=1\n"
 
 
 def read_raw(path: Path) -> dict[str, Samples]:

@@ -12,10 +12,10 @@ from pathlib import Path
 
 from charflow.errors import FolderError, SimulatorError, TrialTimeout
 from charflow.plan.circuit import Circuit
-from charflow.plan.deck import Settings, deck, nudged, number, span
+from charflow.plan.deck import Settings, deck, nudged, number, span, spiceinit
 from charflow.plan.stimulus import begins
 from charflow.plan.trial import Outcome, Trial
-from charflow.simulate.batch import printed_measures, run_batch, spiceinit
+from charflow.simulate.batch import printed_measures, run_batch
 from charflow.simulate.library import environment, find_executable
 
 LIMIT = 600.0  # s for one run
@@ -70,7 +70,7 @@ def _measures(circuit: Circuit, trial: Trial, settings: Settings) -> list[str]:
 
 
 def write_deck(folder: Path, name: str, circuit: Circuit, trial: Trial, settings: Settings) -> Path:
-    """Write the deck as ``NAME.cir`` into ``folder``, and a ``.spiceinit`` if its models need one.
+    """Write the deck as ``NAME.cir`` into ``folder``, and the ``.spiceinit`` it wants beside it.
 
     Raises :class:`FolderError` where that cannot be written.
     """
@@ -78,10 +78,7 @@ def write_deck(folder: Path, name: str, circuit: Circuit, trial: Trial, settings
     try:
         folder.mkdir(parents=True, exist_ok=True)
         path.write_text(replay_deck(circuit, trial, settings), encoding="utf-8")
-        if circuit.compatibility:
-            (folder / ".spiceinit").write_text(spiceinit(circuit.compatibility), encoding="utf-8")
-        else:
-            (folder / ".spiceinit").unlink(missing_ok=True)
+        (folder / ".spiceinit").write_text(spiceinit(circuit.compatibility), encoding="utf-8")
     except OSError as error:
         raise FolderError(f"the deck cannot be written: {error.strerror}", where=(str(path),)) from None
     return path

@@ -40,7 +40,7 @@ def print_comparison(
     say("")
     for line in summary(found, limit):
         say(line, "bold")
-    say(measure(found.floor))
+    say(measure(found.floor) + ("; ! marks what is beyond the limit" if limit is not None else ""))
     if found.changes:
         _print_groups(console, found.groups(), limit)
         _print_worst(console, found, limit, worst)

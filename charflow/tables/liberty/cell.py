@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from charflow.plan.behaviour import Behaviour
 from charflow.sheet import Role, Sheet
 from charflow.tables.flat import Row
+from charflow.tables.liberty.bus import BusTypes, with_buses
 from charflow.tables.liberty.expression import expression
 from charflow.tables.liberty.function import (
     Names,
@@ -50,7 +51,7 @@ class CellFacts:
     rows: tuple[Row, ...]
 
 
-def cell_block(facts: CellFacts, writer: Writer, power: PowerWriter) -> Block:
+def cell_block(facts: CellFacts, writer: Writer, power: PowerWriter, types: BusTypes) -> Block:
     """Return the cell group."""
     sheet, cell = facts.sheet, facts.cell
     names = names_of(cell, tuple(sheet.pins))
@@ -68,10 +69,11 @@ def cell_block(facts: CellFacts, writer: Writer, power: PowerWriter) -> Block:
     else:
         items += sequential(cell, names)
     items += leakage_items(power)
-    for pin in sheet.inputs:
-        items.append(Block("pin", (pin,), tuple(_input(facts, writer, power, pin, kind))))
-    for pin in sheet.outputs:
-        items.append(Block("pin", (pin,), tuple(_output(facts, writer, power, names, pin, kind))))
+    pins = [Block("pin", (pin,), tuple(_input(facts, writer, power, pin, kind))) for pin in sheet.inputs]
+    pins += [
+        Block("pin", (pin,), tuple(_output(facts, writer, power, names, pin, kind))) for pin in sheet.outputs
+    ]
+    items += with_buses(pins, types)
     if scan_level(sheet, cell) is not None:
         items.append(test_cell(sheet, cell, names))
     return Block("cell", (facts.name,), tuple(items))

@@ -13,6 +13,7 @@ from itertools import pairwise
 
 from charflow.errors import SheetError
 from charflow.sheet.logic import parse_logic
+from charflow.tables.liberty.bus import pin_blocks
 from charflow.tables.liberty.syntax import Block, Complex, Simple, Value
 
 _UNITS = ("time_unit", "voltage_unit", "current_unit", "pulling_resistance_unit", "leakage_power_unit")
@@ -95,7 +96,7 @@ def _cells(library: Block) -> Iterator[str]:
 
 
 def _cell(cell: Block, voltages: set[str]) -> Iterator[str]:
-    pins = [block.argument for block in cell.blocks("pin", "pg_pin")]
+    pins = [block.argument for block in (*pin_blocks(cell), *cell.blocks("pg_pin"))]
     yield from (f"the pin {name} is there twice" for name in set(pins) if pins.count(name) > 1)
     for pin in cell.blocks("pg_pin"):
         if pin.text("voltage_name") not in voltages:
@@ -107,7 +108,7 @@ def _cell(cell: Block, voltages: set[str]) -> Iterator[str]:
                 if not block.text(name):
                     yield f"{block.name} has clear and preset but no {name}"
     yield from _expressions(cell, known)
-    for pin in cell.blocks("pin"):
+    for pin in pin_blocks(cell):
         if not pin.text("direction"):
             yield f"pin {pin.argument} has no direction"
         for group in pin.blocks("timing"):

@@ -16,6 +16,7 @@ from charflow.plan.behaviour import behaviour_of
 from charflow.sheet import Role, Sheet
 from charflow.sheet.read import sheet_from
 from charflow.tables.folder import Tables, read_tables
+from charflow.tables.liberty.bus import BusTypes
 from charflow.tables.liberty.cell import CellFacts, cell_block
 from charflow.tables.liberty.check import liberty_check
 from charflow.tables.liberty.lookup import Gaps, Templates
@@ -103,7 +104,7 @@ def _check_cells(measured: Sequence[Measured]) -> None:
 
 
 def _library(measured: Sequence[Measured], name: str, corner: str, gaps: Gaps) -> Library:
-    templates, powers = Templates(), Templates("power_lut_template", "power_over")
+    types, templates, powers = BusTypes(), Templates(), Templates("power_lut_template", "power_over")
     absent, cells, sheets = [], [], []
     for item in measured:
         rows = tuple(row for row in item.tables.rows if row.corner == corner)
@@ -116,11 +117,10 @@ def _library(measured: Sequence[Measured], name: str, corner: str, gaps: Gaps) -
         sheets.append((item.tables.cell, item.sheet))
         power = tuple(row for row in item.power if row.corner == corner)
         facts = CellFacts(item.tables.cell, item.sheet, cell, rows)
-        cells.append(cell_block(facts, writer, PowerWriter(item.tables.cell, power, powers, gaps)))
+        cells.append(cell_block(facts, writer, PowerWriter(item.tables.cell, power, powers, gaps), types))
     gaps.finish()
-    block = Block(
-        "library", (name,), (*_header(sheets, corner), *templates.blocks(), *powers.blocks(), *cells)
-    )
+    shared = (*types.blocks(), *templates.blocks(), *powers.blocks())
+    block = Block("library", (name,), (*_header(sheets, corner), *shared, *cells))
     problems = liberty_check(block)
     if problems:
         raise InputError(

@@ -15,6 +15,7 @@ from pathlib import Path
 from charflow.errors import InputError, SheetError
 from charflow.plan.arcs import Kind
 from charflow.tables.flat import COLUMNS, Row
+from charflow.tables.liberty.bus import pin_blocks
 from charflow.tables.liberty.check import floats
 from charflow.tables.liberty.expression import side_levels
 from charflow.tables.liberty.parse import parse_library
@@ -63,7 +64,7 @@ class _Place:
 
     def is_clock(self, pin: str) -> bool:
         """Tell whether ``pin`` is the cell's clock or gate."""
-        block = next((b for b in self.cell.blocks("pin") if b.argument == pin), None)
+        block = next((b for b in pin_blocks(self.cell) if b.argument == pin), None)
         return block is not None and True in (block.simple("clock"), block.simple("clock_gate_clock_pin"))
 
 
@@ -81,7 +82,7 @@ def rows_from_liberty(path: Path, cell: str | None = None, corner: str | None = 
         templates = {b.argument: b for b in library.blocks("lu_table_template")}
         units = _units(library)
         found: list[Row] = []
-        for pin in block.blocks("pin"):
+        for pin in pin_blocks(block):
             place = _Place(templates, units, name, block, pin)
             for group in pin.blocks("timing"):
                 found += _rows(place, group)
@@ -225,7 +226,7 @@ def _condition(place: _Place, when: str) -> str:
     levels = side_levels(when.replace('"', ""))
     if levels is None:
         return when
-    order = [block.argument for block in place.cell.blocks("pin")]
+    order = [block.argument for block in pin_blocks(place.cell)]
     ranked = sorted(levels, key=lambda pin: order.index(pin) if pin in order else len(order))
     return " & ".join(pin if levels[pin] else f"!{pin}" for pin in ranked)
 

@@ -6,9 +6,10 @@ What is tested is that readers find each number where it belongs, so the numbers
 from __future__ import annotations
 
 import random
+import re
 import shutil
 import subprocess
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
 
@@ -54,14 +55,17 @@ def invented_rows(sheet: Sheet, seed: int) -> tuple[Row, ...]:
 
 @pytest.fixture
 def make_folder(tmp_path: Path, tarn: Path) -> MakeFolder:
-    """Write a run folder of a Tarn cell with invented values; ``change`` edits its rows."""
+    """Write a run folder of a Tarn cell with invented values; ``change`` edits rows, ``names`` pin names."""
 
     def make(
         cell: str,
         change: Callable[[Sequence[Row]], Sequence[Row]] = lambda rows: rows,
         sheet_edit: tuple[str, str] = ("", ""),
+        names: Mapping[str, str] | None = None,
     ) -> Path:
         text = (tarn / f"{cell}.toml").read_text(encoding="utf-8")
+        for old, new in (names or {}).items():
+            text = re.sub(rf"^{old}\b", f'"{new}"', text, flags=re.MULTILINE).replace(f'"{old}"', f'"{new}"')
         assert sheet_edit[0] in text
         copied = tmp_path / f"{cell}.toml"
         copied.write_text(text.replace(*sheet_edit), encoding="utf-8")

@@ -16,9 +16,11 @@ from scipy.interpolate import RegularGridInterpolator
 
 from charflow.sheet import Sheet, read_sheet
 from charflow.sheet.demo import decks_folder
+from charflow.solve.power import Power
 from charflow.tables.flat import Row
 from charflow.tables.folder import read_tables
 from charflow.tables.liberty.library import library_texts, read_measured
+from charflow.tables.power import power_row, write_power
 
 CELLS = sorted(path.stem for path in decks_folder().glob("*.toml"))
 POINTS = [(50.0, 10.0, 5.0), (33.0, 120.0, 17.5)]  # slews of control and data pins [ps], load [fF]
@@ -51,7 +53,7 @@ def _fast_pins(sheet: Sheet) -> tuple[str, ...]:
 
 
 _BLOCK = re.compile(
-    r"Arc type: (?P<kind>[^\n]+)|^(?P<a>\w+) (?P<ae>[\^v]) -> (?P<b>\w+) (?P<be>[\^v])$"
+    r"Arc type: (?P<kind>[^\n]+)|^(?P<a>[\w\[\]]+) (?P<ae>[\^v]) -> (?P<b>[\w\[\]]+) (?P<be>[\^v])$"
     r"|^(?P<what>Delay|Slew|Check) = (?P<value>-?[\d.]+)$",
     re.MULTILINE,
 )
@@ -161,3 +163,61 @@ def test_the_least_pulse_widths_and_period_are_the_pin_attributes(
     period = re.search(r"-([\d.]+)\s+min_period", said)
     assert period is not None, said
     assert float(period[1]) == pytest.approx(largest("min_period", "rise"), abs=1e-3)
+
+
+def test_leakage_and_capacitances_are_what_power_csv_says(
+    make_folder: Callable[..., Path], sta: Sta, tmp_path: Path
+) -> None:
+    folder = make_folder("tarn_latp_1")
+    powers = [Power("typical", "leakage_mean", value=123.4e-12, low=1e-12, high=2e-10)]
+    for pin, farads in (("G", 2.25e-15), ("D", 1.75e-15)):
+        for edge, more in (("rise", 0.0), ("fall", 0.1e-15)):
+            powers.append(Power("typical", "capacitance", pin, edge, value=farads + more))
+    write_power(folder, [power_row(power) for power in powers])
+    (library,) = library_texts([folder], "tarn_latp_1")
+    (tmp_path / "cell.lib").write_text(library.text, encoding="utf-8")
+    sheet = read_measured(folder).sheet
+    (tmp_path / "top.v").write_text(_verilog("tarn_latp_1", sheet), encoding="utf-8")
+    asked = ["report_power -digits 6"]
+    asked += [f"report_net -connections -verbose -digits 4 {pin}" for pin in ("D", "G")]
+
+    said = sta(_script(sheet, ("G",), POINTS[0], asked), tmp_path)
+
+    leakage = re.search(r"^Total\s+(\S+)\s+(\S+)\s+(\S+)", said, re.MULTILINE)
+    assert leakage is not None, said
+    assert float(leakage[3]) == pytest.approx(123.4e-12, rel=1e-5)
+    found = dict(re.findall(r"u1/(\w+) input \(\S+\) (r \S+ f \S+)", said))
+    assert found == {"D": "r 1.7500 f 1.8500", "G": "r 2.2500 f 2.3500"}
+
+
+def test_bits_of_a_bus_are_found_by_their_names(
+    make_folder: Callable[..., Path], sta: Sta, tmp_path: Path
+) -> None:
+    names = {"D0": "D[0]", "D1": "D[1]", "Q0": "Q[1]", "Q1": "Q[0]"}
+    folder = make_folder("tarn_dffp2_1", names=names)
+    (library,) = library_texts([folder], "x")
+    (tmp_path / "cell.lib").write_text(library.text, encoding="utf-8")
+    (tmp_path / "top.v").write_text(
+        "module top (input CK, input [0:1] D, output [1:0] Q);\n"
+        "tarn_dffp2_1 u1 (.CK(CK), .D(D), .Q(Q));\nendmodule\n",
+        encoding="utf-8",
+    )
+    lines = ["read_liberty cell.lib", "read_verilog top.v", "link_design top", "create_clock -period 9000 CK"]
+    lines += ["set_input_transition 50 [all_inputs]", "set_load 5 [all_outputs]"]
+    asked = [f"report_dcalc -digits 4 -from u1/CK -to {{u1/{pin}}}" for pin in ("Q[1]", "Q[0]", "D[1]")]
+
+    got = _reported(sta("\n".join([*lines, *asked, ""]), tmp_path))
+
+    rows = read_tables(folder).rows
+    for pin, quantity in (("Q[1]", "clk_to_q"), ("Q[0]", "clk_to_q"), ("D[1]", "setup")):
+        name = "delay" if quantity == "clk_to_q" else quantity
+        for edge in ("rise", "fall"):
+            values = [
+                row.value_ps
+                for row in rows
+                if (row.quantity == quantity and (row.output, row.output_edge) == (pin, edge))
+                or (row.quantity, row.pin, row.pin_edge, row.data_slew_ps) == (quantity, pin, edge, 50.0)
+            ]
+            at = [row for row in rows if row.value_ps in values]
+            want = [r.value_ps or 0 for r in at if r.clock_slew_ps == 50.0 and r.load_ff == 5.0]
+            assert got[name, "CK", "rise", pin, edge] == pytest.approx([max(want)], abs=1e-3)

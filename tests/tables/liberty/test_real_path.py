@@ -3,9 +3,9 @@
 Two registers with gates between. ``sta`` (Debian's opensta) works out setup and hold slack from a Liberty
 file made by charflow for the register and one made here, by plain transients in the ngspice executable,
 for the gate. The same path is then simulated whole, transistor by transistor, in the ngspice executable
-with decks and ``.measure`` lines written here, and the period (setup) or the skew (hold) at which the second
-register's clock-to-output delay has grown by the tables' own pushout is found by bisection. charflow's
-simulation code has no part in that.
+with decks and ``.measure`` lines written here, at the period (setup) or the skew (hold) of zero slack and
+a little to either side. The second register captures if its clock-to-output delay has grown by no more than
+the tables' own pushout. charflow's simulation code has no part in that.
 """
 
 from __future__ import annotations
@@ -28,7 +28,10 @@ pytestmark = [pytest.mark.slow, pytest.mark.ngspice]
 V, SLEW, PUSHOUT = 1.2, 50.0, 0.10  # supply [V], clock slew [ps] from 20 to 80 %, as in the sheet
 RAMP = SLEW / 0.6
 LOADS = {"q2": 5.0, "qn2": 1.0, "qn1": 1.0}  # fF; as the tables have them
-FINE = 0.05  # ps, to which the edge of failing is found
+RELAXED = 1500.0  # ps; a period at which nothing presses
+# ps, about 1 % of the path: tables are interpolated, a real edge is no ramp, and the first register's output
+# is loaded by gates, not by a capacitor. On either side of the slack's zero by this much the sign is right.
+MARGIN = 3.0
 
 SHEET = """
 [cell]
@@ -65,7 +68,7 @@ class Spice:
 
     def measures(self, body: list[str], stop: float) -> dict[str, float]:
         """Return what the ``.measure`` lines of ``body`` found, in SI units; failed ones are absent."""
-        lines = ["* a path", ".option reltol=1e-5 trtol=1", ".temp 25", f'.lib "{self.decks}/tarn130.lib" tt']
+        lines = ["* a path", ".option reltol=1e-4 trtol=1", ".temp 25", f'.lib "{self.decks}/tarn130.lib" tt']
         lines += [f'.include "{self.decks}/{cell}.spice"' for cell in ("tarn_dffp_1", "tarn_inv_1")]
         lines += [f"vdd vdd 0 {V}", *body, f".tran 20p {stop:.6f}p", ".end"]
         deck = self.folder / "path.cir"
@@ -124,7 +127,8 @@ def _gate_library(spice: Spice) -> str:
     names |= {"rise_transition": "t_rise", "fall_transition": "t_fall"}
     tables = " ".join(table(name, key) for name, key in names.items())
     axes = f'index_1 ("{", ".join(map(str, GATE_SLEWS))}"); index_2 ("{", ".join(map(str, GATE_LOADS))}");'
-    return f"""library (gates) {{ delay_model : table_lookup; time_unit : "1ps"; capacitive_load_unit (1, ff); voltage_unit : "1V";
+    return f"""library (gates) {{ delay_model : table_lookup; time_unit : "1ps";
+  capacitive_load_unit (1, ff); voltage_unit : "1V";
   slew_lower_threshold_pct_rise : 20; slew_lower_threshold_pct_fall : 20;
   slew_upper_threshold_pct_rise : 80; slew_upper_threshold_pct_fall : 80;
   input_threshold_pct_rise : 50; input_threshold_pct_fall : 50;
@@ -183,7 +187,7 @@ def _slacks(
     }
 
 
-LAUNCH, BEFORE = 7000.0, (1000.0, 4000.0)  # ps; the edges before bring both registers to a known state
+LAUNCH, BEFORE = 4000.0, (500.0, 2000.0)  # ps; the edges before bring both registers to a known state
 
 
 def _delay_of_second(
@@ -199,12 +203,12 @@ def _delay_of_second(
     data, level = [], int(wanted[0])
     for value, edge in zip(wanted[1:], BEFORE, strict=True):
         if value != bool(level):
-            data.append(edge + 1500)
+            data.append(edge + 1000)
             level = int(value)
-    clock1 = [t for edge in (*BEFORE, LAUNCH) for t in (edge, edge + 1000)]
+    clock1 = [t for edge in (*BEFORE, LAUNCH) for t in (edge, edge + 700)]
     decides = LAUNCH + gap
-    clock2 = [t for edge in BEFORE for t in (edge, edge + 1000)]
-    clock2 += [decides, decides + 1000] if hold else [LAUNCH, LAUNCH + gap / 2, decides, decides + 1000]
+    clock2 = [t for edge in BEFORE for t in (edge, edge + 700)]
+    clock2 += [decides, decides + 700] if hold else [LAUNCH, LAUNCH + gap / 2, decides, decides + 700]
     half, way = V / 2, "rise" if captured else "fall"
     body = [
         _edges("ck1", 0, clock1, RAMP),
@@ -215,25 +219,22 @@ def _delay_of_second(
         "xu2 d2 ck2 q2 qn2 vdd 0 tarn_dffp_1",
         *(f"c{pin} {pin} 0 {load}f" for pin, load in LOADS.items()),
         f".measure tran t_q when v(q2)={half} {way}=last td={decides - RAMP / 2}p",
-        f".measure tran ends find v(q2) at={decides + 1900}p",
+        f".measure tran ends find v(q2) at={decides + 1100}p",
     ]
-    found = spice.measures(body, decides + 2000)
+    found = spice.measures(body, decides + 1200)
     if "t_q" not in found or abs(found["ends"] - V * captured) > 0.1 * V:
         return None
     return found["t_q"] * 1e12 - decides
 
 
-def _edge_of_failing(spice: Spice, gates: list[tuple[str, str]], captured: bool, *, hold: bool) -> float:
-    """Return the gap [ps] at which the second register is as late as the pushout allows."""
-    relaxed = _delay_of_second(spice, gates, captured, 0.0 if hold else 2000.0, hold=hold)
+def _captures(
+    spice: Spice, gates: list[tuple[str, str]], captured: bool, gaps: tuple[float, ...], *, hold: bool
+) -> list[bool]:
+    """Tell at which ``gaps`` [ps] the second register is no later than the pushout of the tables allows."""
+    relaxed = _delay_of_second(spice, gates, captured, 0.0 if hold else RELAXED, hold=hold)
     assert relaxed is not None
-    safe, failing = (0.0, 1500.0) if hold else (1500.0, 220.0)
-    while abs(safe - failing) > FINE:
-        middle = (safe + failing) / 2
-        delay = _delay_of_second(spice, gates, captured, middle, hold=hold)
-        good = delay is not None and delay <= (1 + PUSHOUT) * relaxed
-        safe, failing = (middle, failing) if good else (safe, middle)
-    return (safe + failing) / 2
+    delays = (_delay_of_second(spice, gates, captured, gap, hold=hold) for gap in gaps)
+    return [delay is not None and delay <= (1 + PUSHOUT) * relaxed for delay in delays]
 
 
 @pytest.fixture(scope="module")
@@ -265,15 +266,15 @@ def libraries(spice: Spice, sta: Any) -> Path:
 
 @pytest.mark.parametrize("edge", ["rise", "fall"])
 def test_setup_slack_is_the_period_to_spare(sta: Any, spice: Spice, libraries: Path, edge: str) -> None:
+    """Bisected once: least periods 323.9 and 316.1 ps from tables, 322.6 and 315.6 ps from transistors."""
     least = PERIOD - _slacks(sta, libraries, LONG, "max")[edge]
-    found = _edge_of_failing(spice, LONG, edge == "rise", hold=False)
-    print(f"\nsetup {edge}: least period {least:.2f} ps from tables, {found:.2f} ps from transistors")
-    assert abs(least - found) < 10
+    either_side = (least - MARGIN, least + MARGIN)
+    assert _captures(spice, LONG, edge == "rise", either_side, hold=False) == [False, True]
 
 
 @pytest.mark.parametrize("edge", ["rise", "fall"])
 def test_hold_slack_is_the_skew_to_spare(sta: Any, spice: Spice, libraries: Path, edge: str) -> None:
+    """Bisected once: largest skews 227.8 and 202.5 ps from tables, 229.3 and 203.5 ps from transistors."""
     most = _slacks(sta, libraries, SHORT, "min")[edge]
-    found = _edge_of_failing(spice, SHORT, edge == "fall", hold=True)
-    print(f"\nhold {edge}: largest skew {most:.2f} ps from tables, {found:.2f} ps from transistors")
-    assert abs(most - found) < 10
+    either_side = (most - MARGIN, most + MARGIN)
+    assert _captures(spice, SHORT, edge == "fall", either_side, hold=True) == [True, False]
