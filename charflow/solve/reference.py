@@ -64,17 +64,15 @@ def _read(arc: Arc, outcome: Outcome, until: float, glitch: float) -> Reference:
             raise TrialError(f"{pin} should stay, but moves by {found:.0%} of supply with everything relaxed")
     if not delays:
         raise _StaysError
-    return Reference(delays, transitions, until, excursions)
+    return Reference(delays, transitions, until)
 
 
 def _scaled(evaluate: Evaluate, sheet: Sheet, arc: Arc, condition: Condition, until: float) -> Reference:
     """Return the reference of an arc whose outputs all stay, with the time in which they would move."""
-    outcome = evaluate(relaxed(sheet, arc, condition, until))
-    excursions = {pin: excursion(outcome.of(pin), level) for pin, level in arc.quiet}
     for trial in contrary(sheet, arc, condition, until):
         swings = [evaluate(trial).of(pin) for pin, _ in arc.quiet]
         late = [swing.crossings[-1] for swing in swings if swing.crossings]
         slow = [t for swing in swings for t in swing.transitions if t is not None]
         if late:
-            return Reference({}, {}, until, excursions, max(*late, *slow, 1e-12))
+            return Reference({}, {}, until, max(*late, *slow, 1e-12))
     raise TrialError(f"no trial moves {arc.quiet[0][0]}, so there is no time scale to search on")

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 from charflow.errors import TrialError
 from charflow.plan.arcs import Arc, Kind
@@ -13,14 +13,12 @@ from charflow.plan.trial import Outcome, Swing
 class Reference:
     """What a relaxed trial shows, times in seconds: delay and transition of each output that moves.
 
-    ``excursions`` are how far outputs that must stay move all the same, as fractions of supply;
     ``scale`` is a time in which the cell's outputs move, ``until`` the window that was needed.
     """
 
     delays: dict[str, float]
     transitions: dict[str, float]
     until: float
-    excursions: dict[str, float] = field(default_factory=dict)
     scale: float = 0.0
 
     @property
@@ -95,8 +93,7 @@ def pushout(
     for pin, level in arc.quiet:
         swing = outcome.of(pin)
         begins_at_rest(swing, not level)
-        more = excursion(swing, level) - reference.excursions.get(pin, 0.0)
-        worst = max(worst or 0.0, more / glitch * limit)
+        worst = max(worst or 0.0, excursion(swing, level) / glitch * limit)
     return worst
 
 
