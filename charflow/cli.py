@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from charflow import __version__
+from charflow.cli_after import compare, cores, power, replay, workers_option
 from charflow.errors import CharflowError, InputError, visible
 
 if TYPE_CHECKING:
@@ -51,20 +52,9 @@ def main() -> None:
     """
 
 
-def _workers(default: int | None) -> int:
-    import os
-
-    return default or len(os.sched_getaffinity(0))
-
-
-_workers_option = click.option(
-    "--workers", type=click.IntRange(1, 512), metavar="N", help="Processes to use; default one a core."
-)
-
-
 @main.command()
 @click.option("--out", type=click.Path(path_type=Path), default=Path("charflow-demo"), show_default=True)
-@_workers_option
+@workers_option
 def demo(out: Path, workers: int | None) -> None:
     """Characterize the built-in cell, end to end.
 
@@ -78,7 +68,7 @@ def demo(out: Path, workers: int | None) -> None:
 @main.command()
 @click.argument("sheet", type=click.Path(path_type=Path))
 @click.option("--out", type=click.Path(path_type=Path), required=True, help="Folder for store and tables.")
-@_workers_option
+@workers_option
 @click.option("--corner", "corners", multiple=True, metavar="C", help="Only this corner; may be repeated.")
 @click.option(
     "--check",
@@ -149,7 +139,7 @@ def _run(
     sheet = read_sheet(path)
     text = _text_of(sheet)
     with live() as (tell, say):
-        result = run_campaign(sheet, out, _workers(workers), corners or None, tell, say, wish or Wish(CHECKS))
+        result = run_campaign(sheet, out, cores(workers), corners or None, tell, say, wish or Wish(CHECKS))
     ended = time.monotonic()
     tables = tables_of(sheet, result)
     if result.answers:
@@ -341,98 +331,6 @@ def tables(folders: tuple[Path, ...], form: str, allow_gaps: bool, out: Path | N
 
 
 @main.command()
-@click.argument("folder", metavar="DIR", type=click.Path(path_type=Path))
-@click.argument("key")
-def replay(folder: Path, key: str) -> None:
-    """Run the trial that decided one table entry again, in plain ngspice, and compare.
-
-    KEY is the entry's key, in the last column of tables.csv, or its first characters. The deck is written
-    to DIR/replay/KEY.cir; it brings the cell to rest by itself and measures with ngspice's own .measure.
-
-    Example: charflow replay run/ 3f9a2c
-    """
-    from charflow.tables.replay import replay as replay_entry
-    from charflow.tables.replay import words
-
-    for line in words(replay_entry(folder, key)):
-        click.echo(line)
-
-
-@main.command()
-@click.argument("old", type=click.Path(path_type=Path))
-@click.argument("new", type=click.Path(path_type=Path))
-@click.option("--limit", metavar="PCT", help='Exit status 1 beyond this change, such as "2%".')
-@click.option("--floor", default="10 ps", show_default=True, metavar="TIME", help="For small constraints.")
-@click.option("--worst", type=click.IntRange(0), default=10, show_default=True, help="Entries listed.")
-@click.option("--picture", type=click.Path(path_type=Path), metavar="FILE", help="Draw it: .svg or .png.")
-@click.option("--json", "as_json", is_flag=True, help="Print the comparison as JSON.")
-def compare(
-    old: Path, new: Path, limit: str | None, floor: str, worst: int, picture: Path | None, as_json: bool
-) -> None:
-    """Say what moved from OLD to NEW, each a run folder, a tables.csv or a Liberty file (.lib).
-
-    A change in % is relative to the size of the old value, and for setup, hold, recovery and removal, which
-    may be zero or negative, to the floor where that is larger. "Moved" is what the brackets of both values
-    do not explain. With --limit the exit status is 1 where a change is larger, or an old value has no
-    counterpart; values and points that are new do not count.
-
-    Example: charflow compare run_old/ run_new/ --limit 2% --picture change.svg
-    """
-    from charflow.tables.compare import compare as compared
-    from charflow.tables.liberty.side import read_sides
-    from charflow.tables.sides import floor_of, limit_of
-
-    most = None if limit is None else limit_of(limit)
-    sides = read_sides(old, new)
-    found = compared(sides[0].rows, sides[1].rows, floor_of(floor))
-    if picture is not None:
-        from charflow.show.change import draw_change
-
-        draw_change(picture, found, most, (sides[0].name, sides[1].name))
-    if as_json:
-        import json
-
-        from charflow.tables.compare_text import comparison_facts
-
-        click.echo(json.dumps(comparison_facts(*sides, found, most), indent=1))
-    else:
-        from rich.console import Console
-
-        from charflow.tables.compare_text import print_comparison
-
-        print_comparison(Console(soft_wrap=True, highlight=False), *sides, found, most, worst)
-    if most is not None and not found.within(most):
-        sys.exit(1)
-
-
-@main.command()
-@click.argument("sheet", type=click.Path(path_type=Path))
-@click.option("--out", type=click.Path(path_type=Path), required=True, help="Folder of a finished run.")
-@_workers_option
-def power(sheet: Path, out: Path, workers: int | None) -> None:
-    """Measure input capacitance, switching energy and leakage of the cell of SHEET into its run folder.
-
-    They go into power.csv there, and from it into Liberty. Each input edge is simulated from every settled
-    state, or from eight of many.
-
-    Example: charflow power my_cell.toml --out run/
-    """
-    from charflow.campaign.power import measure_power
-    from charflow.sheet import read_sheet
-    from charflow.tables.power import power_row, power_summary, rests_of, write_power
-
-    read = read_sheet(sheet)
-    rests = rests_of(out, read)
-    found = measure_power(read, rests, _workers(workers), lambda text: click.echo(text, err=True))
-    rows = [power_row(item) for item in found]
-    write_power(out, rows)
-    for line in power_summary(rows):
-        click.echo(line)
-    if any(row.value is None for row in rows):
-        sys.exit(1)
-
-
-@main.command()
 def doctor() -> None:
     """Check that the simulator is there and sound.
 
@@ -444,6 +342,10 @@ def doctor() -> None:
 
     for line in examine():
         click.echo(line)
+
+
+for _command in (replay, compare, power):
+    main.add_command(_command)
 
 
 if __name__ == "__main__":

@@ -350,7 +350,7 @@ MISSING: dict[str, tuple[dict[str, str | None], str]] = {
     ),
     "library that is none": (
         {"NGSPICE_LIBRARY_PATH": __file__},
-        r"the ngspice library .*does not load: .*",
+        r"the ngspice library .*does not load as libngspice: .*",
     ),
 }
 

@@ -52,7 +52,9 @@ def test_the_committed_tables_are_whole_and_agree_with_each_other(
 ) -> None:
     tables = read_tables(SAMPLE)
     assert {place(row): row for row in tables.rows} == committed
-    assert (SAMPLE / "tables.md").read_text() == to_markdown(tables.cell, tables.conditions, tables.rows)
+    assert (SAMPLE / "tables.md").read_text() == to_markdown(
+        tables.cell, tables.conditions, tables.rows, tables.facts
+    )
     assert all(row.value_ps is not None for row in tables.rows)
 
 
@@ -78,7 +80,7 @@ def test_the_corners_of_the_committed_tables_are_measured_again(
     )
     result = run_campaign(read_sheet(sheet), tmp_path / "run", workers=2)
     rows = [row_of(answer) for answer in result.answers]
-    assert len(rows) == 4 * 2 * 4 + 4 * 4
+    assert len(rows) == 4 * 2 * 4 + 4 * 4 + 6 * 2  # delays and transitions, setup and hold, widths
     assert compare(rows, committed, same_search=False) == []
 
 

@@ -125,7 +125,10 @@ def circuit_of(sheet: Sheet, sources: Sources, corner: str, *, pruned: bool = Tr
     is missing or its ports and the sheet's pins differ.
     """
     condition: Corner = sheet.corners[corner]
-    subckt = find_subckt(sources.netlist, sheet.cell.subckt)
+    try:
+        subckt = find_subckt(sources.netlist, sheet.cell.subckt)
+    except NetlistError as error:
+        raise error.at(str(sheet.cell.netlist)).at(str(sheet.path)) from None
     try:
         check_ports(subckt, tuple(sheet.pins))
     except NetlistError as error:

@@ -138,8 +138,9 @@ def _with_models(corner: Any, folder: Path) -> Any:
 
 
 def _explain(error: ValidationError, path: Path, text: str) -> SheetError:
-    """Turn the first of pydantic's complaints into one sentence about the user's own line."""
-    first = error.errors(include_url=False)[0]
+    """Turn one of pydantic's complaints into one sentence about the user's own line."""
+    found = error.errors(include_url=False)
+    first = next((one for one in found if one["type"] == "extra_forbidden"), found[0])  # a misspelt key
     loc = tuple(str(part) for part in first["loc"])
     model = _TABLES.get(loc[0]) if loc else None
     key = loc[-1] if loc else ""

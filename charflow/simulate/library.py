@@ -50,7 +50,12 @@ def find_executable() -> str:
 def library_version() -> int:
     """Return the major version of libngspice, asked in a process of its own: this one stays clean."""
     find_library()
-    code = "from charflow.simulate.session import Session; print('version', Session.here().version)"
+    code = (
+        "import sys\nfrom charflow.errors import CharflowError\n"
+        "from charflow.simulate.session import Session\n"
+        "try:\n    print('version', Session.here().version)\n"
+        "except CharflowError as error:\n    sys.exit(error.message)\n"
+    )
     try:
         done = subprocess.run(
             [sys.executable, "-c", code], capture_output=True, text=True, timeout=120, check=False

@@ -202,8 +202,13 @@ def test_bits_of_a_bus_are_found_by_their_names(
         "tarn_dffp2_1 u1 (.CK(CK), .D(D), .Q(Q));\nendmodule\n",
         encoding="utf-8",
     )
-    lines = ["read_liberty cell.lib", "read_verilog top.v", "link_design top", "create_clock -period 9000 CK"]
-    lines += ["set_input_transition 50 [all_inputs]", "set_load 5 [all_outputs]"]
+    lines = [
+        "read_liberty cell.lib",
+        "read_verilog top.v",
+        "link_design top",
+        "create_clock -name c -period 9000 CK",
+    ]
+    lines += ["set_propagated_clock c", "set_input_transition 50 [all_inputs]", "set_load 5 [all_outputs]"]
     asked = [f"report_dcalc -digits 4 -from u1/CK -to {{u1/{pin}}}" for pin in ("Q[1]", "Q[0]", "D[1]")]
 
     got = _reported(sta("\n".join([*lines, *asked, ""]), tmp_path))
