@@ -33,7 +33,25 @@ def is_new(db: sqlite3.Connection) -> bool:
 
 def create(db: sqlite3.Connection, tables: str, schema: int) -> None:
     """Make the ``tables`` (SQL statements, each ended by a semicolon) of ``schema``, all or none."""
-    _at_once(db, lambda: [db.execute(statement) for statement in tables.split(";")], schema)
+    _at_once(db, lambda: [db.execute(statement) for statement in statements(tables)], schema)
+
+
+def statements(tables: str) -> list[str]:
+    """Return the SQL statements in ``tables`` in order, white space squeezed."""
+    return [text for part in tables.split(";") if (text := _squeezed(part))]
+
+
+def described(db: sqlite3.Connection) -> list[str]:
+    """Return the statements that made everything in the file, sorted, white space squeezed."""
+    try:
+        found = db.execute("SELECT sql FROM sqlite_master WHERE sql IS NOT NULL").fetchall()
+    except sqlite3.OperationalError as error:  # what cannot be decoded is damage
+        raise sqlite3.DatabaseError(str(error)) from None
+    return sorted(_squeezed(str(sql)) for (sql,) in found)
+
+
+def _squeezed(sql: str) -> str:
+    return " ".join(sql.split()).replace("( ", "(")
 
 
 def bring_up(db: sqlite3.Connection, schema: int, steps: Mapping[int, Step] | None = None) -> None:
@@ -49,9 +67,9 @@ def bring_up(db: sqlite3.Connection, schema: int, steps: Mapping[int, Step] | No
             f"the store has schema {found}, this charflow knows up to {schema}",
             todo="Use the charflow that wrote it, or a newer one.",
         )
-    missing = [number for number in range(found, schema) if number not in steps]
-    if missing and found < 1:
+    if found < 1 and found not in steps:
         raise sqlite3.DatabaseError(f"it states schema {found}, which no charflow wrote")
+    missing = [number for number in range(found, schema) if number not in steps]
     if missing:
         raise FolderError(
             f"the store has schema {found}; this charflow can bring up those from {missing[-1] + 1} on",

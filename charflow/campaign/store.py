@@ -15,7 +15,7 @@ from pathlib import Path
 from typing import Any
 
 from charflow.campaign.codec import seal
-from charflow.campaign.migrate import bring_up, copied, create, is_new, schema_of
+from charflow.campaign.migrate import bring_up, copied, create, described, is_new, schema_of, statements
 from charflow.errors import FolderError
 
 FILE = "charflow.sqlite"
@@ -80,9 +80,11 @@ class Store:
                 raise sqlite3.DatabaseError("it is empty")
             db = sqlite3.connect(self.path)
         try:
-            if db.execute("PRAGMA quick_check(1)").fetchone()[0] != "ok":
-                raise sqlite3.DatabaseError("its pages do not add up")
+            if db.execute("PRAGMA integrity_check(1)").fetchone()[0] != "ok":
+                raise sqlite3.DatabaseError("its pages and indexes do not add up")
             db = self._up_to_date(db)
+            if described(db) != sorted(statements(_TABLES)):
+                raise sqlite3.DatabaseError(f"its tables are not those of schema {SCHEMA}")
             for table in _COLUMNS:
                 for _, sound in _entries(db, table):
                     if not sound:

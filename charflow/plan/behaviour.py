@@ -122,8 +122,9 @@ _WAYS: dict[Behaviour, dict[tuple[Bits, Levels], Start]] = {}
 def _search(cell: Behaviour) -> dict[tuple[Bits, Levels], Start]:
     """Breadth-first search over (state, inputs) from every vector with the cell closed and nothing known.
 
-    Each way begins with the control pin moving once: nodes that nothing drives then have the history of a
-    running clock, not the infinite age of an operating point.
+    A flip-flop begins with its clock inactive: what it stores takes a clock pulse, as in a running circuit.
+    A latch that is open stores without one, so its gate first moves once: else nodes that nothing drives
+    would have the infinite age of an operating point.
     """
     ways: dict[tuple[Bits, Levels], Start] = {}
     queue: deque[tuple[Bits, dict[str, bool], Start]] = deque()
@@ -132,7 +133,8 @@ def _search(cell: Behaviour) -> dict[tuple[Bits, Levels], Start]:
             continue
         other = {**vector, cell.control: not vector[cell.control]}
         state = cell.after(cell.unknown, other, vector)
-        queue.append((state, vector, Start((levels(other), levels(vector)))))
+        begin = (levels(other), levels(vector)) if cell.transparent else (levels(vector),)
+        queue.append((state, vector, Start(begin)))
     while queue:
         state, vector, start = queue.popleft()
         key = (state, levels(vector))

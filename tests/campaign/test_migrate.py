@@ -41,6 +41,7 @@ def step_from_old(db: sqlite3.Connection) -> None:
         "meta": "name TEXT PRIMARY KEY, value TEXT NOT NULL",
     }.items():
         db.execute(f"CREATE TABLE {table} ({columns}, seal TEXT NOT NULL) WITHOUT ROWID")
+    db.execute("CREATE INDEX trials_by_label ON trials (label)")
     for values in db.execute("SELECT key, label, trial, result FROM results").fetchall():
         db.execute("INSERT INTO trials VALUES (?, ?, ?, ?, ?)", (*values, seal(*values)))
     db.execute("DROP TABLE results")

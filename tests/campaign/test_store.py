@@ -143,6 +143,43 @@ def test_one_flipped_digit_of_a_kept_number_is_noticed_and_costs_that_entry_only
     assert found == {key: value for key, value in EXPECTED.items() if key != "row5"}
 
 
+@pytest.mark.parametrize(
+    ("old", "new"),
+    [
+        (b"meta (name TEXT PRIMARY KEY, value TEXT", b"meta (name TEXT PRIMARY KEY, value TEXU"),
+        (b"meta (name TEXT PRIMARY KEY, value TEXT", b"meta (name TEXT PRIMARY KEY, value TEX\xb1"),
+        (b"trials_by_label ON trials (label)", b"trials_by_label ON trials (trial)"),
+    ],
+)
+def test_tables_that_would_take_or_find_entries_otherwise_are_not_used(
+    tmp_path: Path, old: bytes, new: bytes
+) -> None:
+    whole = filled(tmp_path).read_bytes()
+    assert whole.count(old) == 1
+    found, said = opened_after_damage(tmp_path, whole.replace(old, new))
+    assert "is damaged" in said[0]
+    assert found == EXPECTED
+
+
+def test_an_index_that_leads_to_the_wrong_trials_is_damage(tmp_path: Path) -> None:
+    whole = filled(tmp_path).read_bytes()
+    at = whole.index(b"label0key0")  # an entry of the index; the tables have a column in between
+    found, said = opened_after_damage(tmp_path, whole[:at] + b"label2" + whole[at + 6 :])
+    assert "do not add up" in said[0]
+    assert found == EXPECTED
+
+
+@pytest.mark.parametrize("schema", [-1, -2_000_000_000, 0])
+def test_a_schema_below_the_first_is_damage_and_costs_no_entry(tmp_path: Path, schema: int) -> None:
+    path = filled(tmp_path)
+    with sqlite3.connect(path) as db:
+        db.execute(f"PRAGMA user_version={schema}")
+    db.close()
+    found, said = opened_after_damage(tmp_path, path.read_bytes())
+    assert f"states schema {schema}" in said[0]
+    assert found == EXPECTED
+
+
 @pytest.mark.parametrize("readonly", [False, True])
 def test_damage_that_sqlite_cannot_even_quote_is_damage(tmp_path: Path, readonly: bool) -> None:
     whole = filled(tmp_path).read_bytes()
