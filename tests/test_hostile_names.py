@@ -130,7 +130,7 @@ def checked_decks(folder: Path) -> None:
     found = list(folder.iterdir())
     assert found
     for path in found:
-        assert re.fullmatch(r"[\w.+-]+\.cir", path.name)
+        assert path.name == ".spiceinit" or re.fullmatch(r"[\w.+-]+\.cir", path.name)
         lines = [line.strip().lower() for line in path.read_text().splitlines()]
         assert not [line for line in lines if line.startswith((".control", ".include", ".lib", "shell", "`"))]
 
