@@ -246,3 +246,20 @@ def test_setup_and_hold_of_one_data_edge_add_up_to_a_positive_aperture(
         for edge in ("rise", "fall"):
             pairs = zip(tables["setup", edge], tables["hold", edge], strict=True)
             assert all(s + h > 0 for setup, hold in pairs for s, h in zip(setup, hold, strict=True))
+
+
+@pytest.mark.parametrize(("edge", "published_as"), [("rise", "rise_constraint"), ("fall", "fall_constraint")])
+def test_the_least_clock_pulse_lies_within_20_percent_of_the_published_one(
+    as_published: list[Row], published: dict[str, Any], edge: str, published_as: str
+) -> None:
+    groups = published["pins"]["CLK"]["timing"]
+    table = next(group for group in groups if group["timing_type"] == "min_pulse_width")[published_as]
+    widths: dict[float, float] = {}
+    for row in as_published:
+        if (row.quantity, row.pin_edge) == ("pulse_width", edge) and row.value_ps is not None:
+            assert row.clock_slew_ps is not None
+            widths[row.clock_slew_ps] = max(widths.get(row.clock_slew_ps, 0.0), row.value_ps)
+    assert widths[10.0] == pytest.approx(1000 * table["values"][0], rel=0.2)
+    # at 0.5 and 1.5 ns slew the published entries are slew / 0.6: pulses limited by their ramps, as ours are
+    assert widths[500.0] == pytest.approx(1000 * table["values"][1], abs=0.001)
+    assert widths[1500.0] == pytest.approx(1000 * table["values"][2], abs=0.001)
