@@ -9,6 +9,7 @@ from concurrent.futures import FIRST_COMPLETED, Future, wait
 from dataclasses import asdict, replace
 from typing import Any
 
+from charflow import __version__
 from charflow.campaign.codec import accuracy_from, accuracy_to, row_from, row_to
 from charflow.campaign.graph import Node, nodes_of, trial_label
 from charflow.campaign.pool import Pool, kill
@@ -149,7 +150,8 @@ def _from_store(campaign: Campaign, node: Node) -> bool:
 def _key(campaign: Campaign, node: Node) -> str:
     """Return the store key of a node: a digest of everything its result follows from."""
     sheet = campaign.sheet
-    facts = [campaign.circuits[node.corner].digest, str(campaign.version)]
+    # a newer charflow may search otherwise: its rows are its own, its trials are shared
+    facts = [campaign.circuits[node.corner].digest, str(campaign.version), __version__]
     if node.proves:
         facts = ["proof", campaign.whole[node.corner].digest, *facts]
     elif node.group is None:
