@@ -21,6 +21,7 @@ def sheet(make_sheet: Callable[..., Path]) -> Path:
     return make_sheet(clock_slew='["20 ps", "100 ps"]')
 
 
+@pytest.mark.slow
 def test_a_run_writes_its_certificate_and_says_it_and_a_second_run_changes_no_byte(
     run_cli: RunCli, sheet: Path, tmp_path: Path
 ) -> None:

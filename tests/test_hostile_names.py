@@ -204,6 +204,7 @@ HOSTILE = {
 }
 
 
+@pytest.mark.slow
 @pytest.mark.ngspice
 def test_hostile_names_go_through_a_whole_run_as_names(
     work: Path, tarn: Path, run_cli: Callable[..., Any]

@@ -68,6 +68,7 @@ def test_the_committed_results_belong_to_the_demo_sheet_and_name_no_machine(
         assert not re.search(rb"/(home|root|tmp|work|usr)/", path.read_bytes()), path
 
 
+@pytest.mark.slow
 @pytest.mark.ngspice
 def test_the_corners_of_the_committed_tables_are_measured_again(
     committed: dict[tuple[Any, ...], Row], make_sheet: Callable[..., Path], tmp_path: Path

@@ -55,6 +55,7 @@ def test_a_damaged_file_is_refused_with_its_place(text: str, says: str, tmp_path
         read_power(tmp_path)
 
 
+@pytest.mark.slow
 @pytest.mark.ngspice
 def test_the_command_measures_a_finished_run_and_liberty_takes_it(
     tiny_sheet: Path, run_cli: Callable[..., Any], tmp_path: Path
