@@ -15,6 +15,8 @@ from charflow.tables.certificate import facts_of, to_csv
 from charflow.tables.flat import row_of
 from charflow.tables.flat import to_csv as table_csv
 
+pytestmark = pytest.mark.slow
+
 AXES = {
     "clock_slew": '["10 ps", "50 ps", "200 ps"]',
     "data_slew": '["10 ps", "50 ps"]',

@@ -21,6 +21,8 @@ import pytest
 from charflow.campaign.journal import Follower
 from charflow.campaign.store import FILE, Store
 
+pytestmark = pytest.mark.slow
+
 AXES = {
     "clock_slew": '["10 ps", "50 ps", "200 ps"]',
     "data_slew": '["10 ps", "50 ps"]',
